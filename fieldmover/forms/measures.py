@@ -1,0 +1,212 @@
+"""Diagonal metric weights: what turns fluxes and circulations into energies.
+
+The energy of a flux is half the sum of w F^2 with w = dual length / face area, the continuous form of which is in
+Brackbill & Barnes (1980), The effect of nonzero div B on the numerical solution of the magnetohydrodynamic
+equations. The solvers need the reciprocals, called conductances here, because they stay finite (zero) on collapsed
+faces. On Cartesian, cylindrical and spherical grids every conductance is a product of one number per axis.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fieldmover.forms.fields import Three
+from fieldmover.grids.axes import centres_of, dual_lengths
+from fieldmover.grids.grid import Grid, at, cosine_drop, outer, sines
+
+Array = NDArray[np.float64]
+Factors = tuple[Three, Three, Three]
+
+
+def face_factors(grid: Grid) -> Factors | None:
+    """Conductances of faces, area / dual length, as products of 1-D arrays.
+
+    Parameters
+    ----------
+    grid : Grid
+
+    Returns
+    -------
+    tuple or None
+        ``factors[d][e]``: the factor of axis e for faces normal to axis d; length n_d + 1 along d, n_e elsewhere;
+        unit L in all. None where the map has no such form.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> face_factors(fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1]))[0][0]
+    array([2., 1., 2.])
+    """
+    steps = [np.diff(q) for q in grid.nodes]
+    inverse = [1.0 / dual_lengths(q, seam) for q, seam in zip(grid.nodes, grid.periodic, strict=True)]
+    (d1, d2, d3), (i1, i2, i3) = steps, inverse
+    centre = [centres_of(q) for q in grid.nodes]
+    if grid.kind == "cartesian":
+        return (i1, d2, d3), (d1, i2, d3), (d1, d2, i3)
+    if grid.kind == "cylindrical":
+        R = grid.nodes[0]
+        return (R * i1, d2, d3), (d1 / centre[0], i2, d3), (d1 * centre[0], d2, i3)
+    if grid.kind == "spherical":
+        r = grid.nodes[0]
+        belt = cosine_drop(grid.nodes[1])
+        return (r**2 * i1, belt, d3), (d1, sines(grid) * i2, d3), (d1, d2 / np.sin(centre[1]), i3)
+    return None
+
+
+def face_conductances(grid: Grid) -> Three:
+    """Conductances of all faces, area / dual length, unit L; 0 on collapsed faces.
+
+    The dual length is the distance between the two cell centres beside the face, at a wall from the centre to
+    the wall.
+
+    Parameters
+    ----------
+    grid : Grid
+
+    Returns
+    -------
+    tuple of three ndarrays
+        Shapes of the faces.
+    """
+    factors = face_factors(grid)
+    if factors is not None:
+        return outer(factors[0]), outer(factors[1]), outer(factors[2])
+    centres = grid.centres()
+    result = []
+    for axis, area in enumerate(grid.face_areas()):
+        length = np.empty(area.shape)
+        length[at(axis, slice(1, -1))] = np.sqrt((np.diff(centres, axis=axis + 1) ** 2).sum(axis=0))
+        for end in (0, -1):
+            length[at(axis, end)] = _to_wall(grid, centres, axis, end)
+        if grid.periodic[axis]:
+            length[at(axis, 0)] = length[at(axis, -1)] = length[at(axis, 0)] + length[at(axis, -1)]
+        result.append(np.where(area > 0, area, 0.0) / length)
+    return result[0], result[1], result[2]
+
+
+def _to_wall(grid: Grid, centres: Array, axis: int, end: int) -> Array:
+    """Distance from the centres of the outermost cells to the middle of their wall faces."""
+    q = [centres_of(nodes) for nodes in grid.nodes]
+    q[axis] = grid.nodes[axis][end : end + 1] if end == 0 else grid.nodes[axis][-1:]
+    wall = np.stack(grid.map.to_cartesian(q[0][:, None, None], q[1][None, :, None], q[2][None, None, :]))
+    gap = np.take(wall, 0, axis + 1) - np.take(centres, end, axis + 1)
+    return np.asarray(np.sqrt((gap**2).sum(axis=0)))
+
+
+def edge_factors(grid: Grid) -> Factors | None:
+    """Weights of edges, dual area / edge length, as products of 1-D arrays.
+
+    Parameters
+    ----------
+    grid : Grid
+
+    Returns
+    -------
+    tuple or None
+        ``factors[d][e]``: the factor of axis e for edges along axis d; length n_d along d, n_e + 1 elsewhere; unit
+        L in all. Ring edges at a pole, which have no length, have weight 0. None where the map has no such form.
+    """
+    steps = [1.0 / np.diff(q) for q in grid.nodes]
+    dual = [dual_lengths(q, seam) for q, seam in zip(grid.nodes, grid.periodic, strict=True)]
+    (s1, s2, s3), (d1, d2, d3) = steps, dual
+    centre = [centres_of(q) for q in grid.nodes]
+    if grid.kind == "cartesian":
+        return (s1, d2, d3), (d1, s2, d3), (d1, d2, s3)
+    if grid.kind == "cylindrical":
+        ring = np.divide(d1, grid.nodes[0], out=np.zeros_like(d1), where=grid.nodes[0] > 0)
+        return (centre[0] * s1, d2, d3), (ring, s2, d3), (_dual_half_squares(grid, 0), d2, s3)
+    if grid.kind == "spherical":
+        across = _dual_half_squares(grid, 0) / grid.nodes[0]
+        sine = sines(grid)
+        ring = np.divide(d2, sine, out=np.zeros_like(d2), where=sine > 0)
+        belt = cosine_drop(_dual_nodes(grid, 1))
+        return (centre[0] ** 2 * s1, belt, d3), (across, np.sin(centre[1]) * s2, d3), (across, ring, s3)
+    return None
+
+
+def edge_weights(grid: Grid) -> Three:
+    """Weights of all edges, dual area / edge length, unit L; 0 on collapsed edges.
+
+    On warped grids the dual area is a quarter of the volumes of the (up to four) cells round the edge, divided by
+    the edge length.
+
+    Parameters
+    ----------
+    grid : Grid
+
+    Returns
+    -------
+    tuple of three ndarrays
+        Shapes of the edges. Edges that coincide on a pole share its weight; the last edge along a seam has the
+        weight of the first.
+    """
+    factors = edge_factors(grid)
+    if factors is not None:
+        return outer(factors[0]), outer(factors[1]), outer(factors[2])
+    x, volume = grid.node_positions(), grid.cell_volumes()
+    result = []
+    for axis in range(3):
+        length = np.sqrt((np.diff(x, axis=axis + 1) ** 2).sum(axis=0))
+        share = volume
+        for d in range(3):
+            if d != axis:
+                share = _half_to_both_sides(share, d, grid.periodic[d])
+        weight = np.divide(share, length**2, out=np.zeros_like(length), where=length > 1e-9 * length.max())
+        result.append(weight)
+    for axis, ring in enumerate(grid.ring_axis):
+        for end in grid.pole_ends(axis):
+            if ring is not None:
+                result[ring][at(axis, end)] = 0.0
+    return result[0], result[1], result[2]
+
+
+def _half_to_both_sides(cells: Array, axis: int, periodic: bool) -> Array:
+    """Give half of each value to the node before and the node after it along `axis`."""
+    shape = list(cells.shape)
+    shape[axis] += 1
+    out = np.zeros(shape)
+    out[at(axis, slice(None, -1))] += 0.5 * cells
+    out[at(axis, slice(1, None))] += 0.5 * cells
+    if periodic:
+        out[at(axis, 0)] = out[at(axis, -1)] = out[at(axis, 0)] + out[at(axis, -1)]
+    return out
+
+
+def _dual_nodes(grid: Grid, axis: int) -> Array:
+    """Cell centres with the two walls: the ends of the dual cells of an axis without seam."""
+    nodes = grid.nodes[axis]
+    return np.concatenate([nodes[:1], centres_of(nodes), nodes[-1:]])
+
+
+def _dual_half_squares(grid: Grid, axis: int) -> Array:
+    """(b^2 - a^2) / 2 over the dual cell of each node."""
+    ends = _dual_nodes(grid, axis)
+    return np.asarray(np.diff(ends) * centres_of(ends))
+
+
+def energy(faces: Three, conductances: Three, periodic: tuple[bool, bool, bool]) -> float:
+    """Half the sum of F^2 / conductance over all faces, each face of a seam once (Heaviside-Lorentz: B^2 / 2).
+
+    Parameters
+    ----------
+    faces : tuple of three ndarrays
+        Fluxes, unit B L^2.
+    conductances : tuple of three ndarrays
+        As `face_conductances` gives them; faces of conductance 0 are left out.
+    periodic : tuple of three bool
+
+    Returns
+    -------
+    float
+        Unit B^2 L^3.
+    """
+    total = 0.0
+    for axis in range(3):
+        part = slice(None, -1) if periodic[axis] else slice(None)
+        f, c = faces[axis][at(axis, part)], conductances[axis][at(axis, part)]
+        for start in range(0, f.shape[0], 16):
+            rows = slice(start, start + 16)
+            ratio = np.divide(f[rows] ** 2, c[rows], out=np.zeros_like(f[rows]), where=c[rows] > 0)
+            total += float(ratio.sum())
+    return 0.5 * total
