@@ -1,0 +1,238 @@
+"""What stored components of a magnetic field mean, at faces, edges and cell centres.
+
+With orthonormal ("physical") components a face carries B times its area. With coordinate components B^i it
+carries B^i times the integral of sqrt(gamma) over the face, and with densitised ones, which include
+sqrt(gamma), the number times the steps of the two coordinates. All three are products of one array per axis
+on these grids.
+"""
+
+from __future__ import annotations
+
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fieldmover.errors import DataError, FieldError
+from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges, close_faces
+from fieldmover.grids.axes import centres_of
+from fieldmover.grids.grid import Grid, area_factors, at, outer, sines, volume_factors
+
+Array = NDArray[np.float64]
+Factors = tuple[Array, Array, Array]
+Basis = Literal["physical", "coordinate", "cartesian"]
+
+SEAM = 1e-5
+"""What the two copies of a seam may differ by, relative to the largest value: single precision, and more."""
+
+
+def flux_from_faces(grid: Grid, arrays: Three, basis: Basis, densitised: bool = False) -> FaceFlux:
+    """Fluxes from field components stored on faces.
+
+    Parameters
+    ----------
+    grid : Grid
+        Cartesian, cylindrical or spherical.
+    arrays : three arrays
+        The component normal to each face, shapes (n1 + 1, n2, n3), (n1, n2 + 1, n3), (n1, n2, n3 + 1), unit
+        B.
+    basis : "physical" or "coordinate"
+        Orthonormal components, or B^i. On a Cartesian grid both are the same, and so is "cartesian".
+    densitised : bool
+        Whether coordinate components include sqrt(gamma).
+
+    Returns
+    -------
+    FaceFlux
+        Unit B L^2. Values on faces that a pole collapses are left out: they carry no flux.
+
+    Raises
+    ------
+    DataError
+        If the two copies of a seam differ.
+    FieldError
+        If the grid is of another kind.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cartesian_grid([0, 2], [0, 3], [0, 1])
+    >>> flux_from_faces(grid, (np.ones((2, 1, 1)), np.ones((1, 2, 1)), np.ones((1, 1, 2))), "physical").f3
+    array([[[6., 6.]]])
+    """
+    faces = [
+        values * outer(factors)
+        for values, factors in zip(arrays, _faces(grid, basis, densitised), strict=True)
+    ]
+    _check_seams(grid, faces, "faces")
+    three = (faces[0], faces[1], faces[2])
+    close_faces(grid, three)
+    return FaceFlux(grid, three)
+
+
+def faces_from_flux(flux: FaceFlux, basis: Basis, densitised: bool = False) -> Three:
+    """Field components on faces from fluxes, the inverse of `flux_from_faces`; 0 on collapsed faces.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cartesian_grid([0, 2], [0, 3], [0, 1])
+    >>> flux = fm.FaceFlux(grid, (np.ones((2, 1, 1)), np.ones((1, 2, 1)), np.ones((1, 1, 2))))
+    >>> faces_from_flux(flux, "physical")[1].ravel()
+    array([0.5, 0.5])
+    """
+    out = []
+    for values, factors in zip(flux.faces, _faces(flux.grid, basis, densitised), strict=True):
+        measure = outer(factors)
+        out.append(np.divide(values, measure, out=np.zeros_like(values), where=measure != 0))
+    return out[0], out[1], out[2]
+
+
+def potential_from_edges(grid: Grid, arrays: Three, basis: Basis) -> EdgePotential:
+    """Circulations from components of a vector potential stored on edges.
+
+    Parameters
+    ----------
+    grid : Grid
+        Cartesian, cylindrical or spherical.
+    arrays : three arrays
+        The component along each edge, shapes (n1, n2 + 1, n3 + 1), (n1 + 1, n2, n3 + 1), (n1 + 1, n2 + 1,
+        n3), unit B L (physical) or B L times the length of one unit of the coordinate (coordinate: covariant
+        A_i).
+    basis : "physical" or "coordinate"
+        On a Cartesian grid both are the same, and so is "cartesian".
+
+    Raises
+    ------
+    DataError
+        If the two copies of a seam differ.
+    FieldError
+        If the grid is of another kind.
+    """
+    edges = [values * outer(factors) for values, factors in zip(arrays, _edges(grid, basis), strict=True)]
+    _check_seams(grid, edges, "edges")
+    three = (edges[0], edges[1], edges[2])
+    close_edges(grid, three)
+    return EdgePotential(grid, three)
+
+
+def cell_density(grid: Grid) -> Array:
+    """sqrt(gamma) at cell centres, shape (n1, n2, n3).
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cylindrical_grid([1, 3], [0, 1], [0, 1])
+    >>> cell_density(grid).ravel()
+    array([2.])
+    """
+    return outer(_density(grid, centres=True))
+
+
+def to_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
+    """Cartesian components of a vector at cell centres, shape (3, n1, n2, n3) in and out.
+
+    Parameters
+    ----------
+    grid : Grid
+    vector : array
+        Its components along the axes of the grid, or Cartesian.
+    basis : "physical", "coordinate" or "cartesian"
+        Along unit vectors, along dx/dq^i, or along x, y, z.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cylindrical_grid([1, 3], [0, np.pi], [0, 1])
+    >>> to_cartesian(grid, np.array([0.0, 1.0, 2.0]).reshape(3, 1, 1, 1), "physical").ravel().round(12)
+    array([-1.,  0.,  2.])
+    """
+    if basis == "cartesian" or grid.kind == "cartesian":
+        return vector
+    return np.asarray(np.einsum("ij...,j...->i...", _tangents(grid, basis), vector))
+
+
+def from_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
+    """Components of a vector at cell centres in a basis of the grid, the inverse of `to_cartesian`."""
+    if basis == "cartesian" or grid.kind == "cartesian":
+        return vector
+    tangents = np.moveaxis(_tangents(grid, basis), (0, 1), (-2, -1))
+    return np.asarray(
+        np.moveaxis(np.linalg.solve(tangents, np.moveaxis(vector, 0, -1)[..., None])[..., 0], -1, 0)
+    )
+
+
+def _tangents(grid: Grid, basis: Basis) -> Array:
+    """Vectors along the axes at cell centres, [Cartesian component, axis, i1, i2, i3]."""
+    q1, q2, q3 = (centres_of(nodes) for nodes in grid.nodes)
+    tangents = grid.map.jacobian(q1[:, None, None], q2[None, :, None], q3[None, None, :])
+    if basis == "physical":
+        tangents = tangents / np.sqrt((tangents**2).sum(axis=0))
+    return np.asarray(np.broadcast_to(tangents, (3, 3, *grid.shape)))
+
+
+def _faces(grid: Grid, basis: Basis, densitised: bool) -> tuple[Factors, Factors, Factors]:
+    """What a stored component is multiplied by, [normal axis][axis]."""
+    if basis != "coordinate":
+        factors = area_factors(grid)
+        if factors is None:
+            raise _no_closed_form(grid)
+        return factors[0], factors[1], factors[2]
+    if densitised:
+        q1, q2, q3 = grid.nodes
+        points: Factors = (np.ones(q1.size), np.ones(q2.size), np.ones(q3.size))
+        integrals: Factors | None = (np.diff(q1), np.diff(q2), np.diff(q3))
+    else:
+        points, integrals = _density(grid, centres=False), volume_factors(grid)
+    if integrals is None:
+        raise _no_closed_form(grid)
+    return _mixed(points, integrals, 0), _mixed(points, integrals, 1), _mixed(points, integrals, 2)
+
+
+def _mixed(points: Factors, integrals: Factors, normal: int) -> Factors:
+    a, b, c = (points[axis] if axis == normal else integrals[axis] for axis in range(3))
+    return a, b, c
+
+
+def _density(grid: Grid, centres: bool) -> Factors:
+    """sqrt(gamma) at nodes or cell centres, as a product of one array per axis."""
+    q1, q2, q3 = (centres_of(nodes) if centres else nodes for nodes in grid.nodes)
+    one2, one3 = np.ones_like(q2), np.ones_like(q3)
+    if grid.kind == "cartesian":
+        return np.ones_like(q1), one2, one3
+    if grid.kind == "cylindrical":
+        return q1, one2, one3
+    if grid.kind == "spherical":
+        return q1**2, np.sin(q2) if centres else sines(grid), one3
+    raise _no_closed_form(grid)
+
+
+def _edges(grid: Grid, basis: Basis) -> tuple[Factors, Factors, Factors]:
+    """What a stored component of the potential is multiplied by, [direction][axis]."""
+    q1, _, _ = grid.nodes
+    d1, d2, d3 = (np.diff(nodes) for nodes in grid.nodes)
+    one1, one2, one3 = (np.ones(nodes.size) for nodes in grid.nodes)
+    if basis == "coordinate" or grid.kind == "cartesian":
+        return (d1, one2, one3), (one1, d2, one3), (one1, one2, d3)
+    if grid.kind == "cylindrical":
+        return (d1, one2, one3), (q1, d2, one3), (one1, one2, d3)
+    if grid.kind == "spherical":
+        return (d1, one2, one3), (q1, d2, one3), (q1, sines(grid), d3)
+    raise _no_closed_form(grid)
+
+
+def _check_seams(grid: Grid, arrays: list[Array], what: str) -> None:
+    for axis, seam in enumerate(grid.periodic):
+        for component, array in enumerate(arrays):
+            if not seam or array.shape[axis] == grid.shape[axis]:
+                continue
+            gap = float(np.abs(array[at(axis, 0)] - array[at(axis, -1)]).max())
+            if gap > SEAM * float(np.abs(array).max()):
+                raise DataError(
+                    f"magnetic field on {what}, component {component + 1}: first and last value along "
+                    f"the seam of axis {axis + 1} differ by up to {gap:.3g} in flux; expected copies"
+                )
+
+
+def _no_closed_form(grid: Grid) -> FieldError:
+    return FieldError(f"components on faces and edges of a {grid.kind} grid have no closed form")
