@@ -1,0 +1,217 @@
+"""Two fields on one grid, and two sets of figures, side by side."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fieldmover.diagnostics.cells import cell_slabs, mean_field, same_place
+from fieldmover.diagnostics.limits import flattened
+from fieldmover.errors import FieldError
+from fieldmover.forms.fields import FaceFlux
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class VectorFigures:
+    """How near a field b is to a reference B.
+
+    After Schrijver et al. (2006), Nonlinear force-free modeling of coronal magnetic fields. Part I, Solar
+    Physics 235, 161 (definitions from memory).
+
+    Sums carry the weights of the points, means are over the weights. A figure is None where its denominator
+    vanishes.
+
+    Attributes
+    ----------
+    vector_correlation : float or None
+        sum B.b / sqrt(sum B^2 sum b^2); 1 for equal fields.
+    cosine : float or None
+        Mean of B.b / (|B| |b|) over the points where neither vanishes; 1 for equal directions.
+    normalised_error : float or None
+        sum |b - B| / sum |B|; 0 for equal fields.
+    mean_error : float or None
+        Mean of |b - B| / |B| over the points where B does not vanish; 0 for equal fields.
+    energy_ratio : float or None
+        sum b^2 / sum B^2.
+    """
+
+    vector_correlation: float | None
+    cosine: float | None
+    normalised_error: float | None
+    mean_error: float | None
+    energy_ratio: float | None
+
+    def as_dict(self) -> dict[str, float | None]:
+        """Plain JSON."""
+        return asdict(self)
+
+
+@dataclass(frozen=True)
+class Difference:
+    """One figure before and after.
+
+    Attributes
+    ----------
+    before, after : float or None
+    change : float or None
+        after - before; None where either is undefined.
+    relative : float or None
+        change / |before|; None where that is undefined.
+    """
+
+    before: float | None
+    after: float | None
+    change: float | None
+    relative: float | None
+
+
+def compare_vectors(reference: Array, field: Array, weights: Array | None = None) -> VectorFigures:
+    """Figures of a vector field against a reference at the same points.
+
+    Parameters
+    ----------
+    reference, field : ndarrays, shape (3, ...)
+        Components in one orthonormal basis, unit B.
+    weights : ndarray, shape (...), optional
+        1 by default.
+
+    Returns
+    -------
+    VectorFigures
+
+    Raises
+    ------
+    FieldError
+        If the shapes differ.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> b = np.array([[1.0, 2.0], [0.0, 1.0], [3.0, 0.0]])
+    >>> figures = compare_vectors(b, 1.1 * b)
+    >>> round(figures.normalised_error, 12), round(figures.energy_ratio, 12)
+    (0.1, 1.21)
+    """
+    if np.shape(reference) != np.shape(field) or np.shape(field)[:1] != (3,):
+        raise FieldError(
+            f"vectors: shapes {np.shape(reference)} and {np.shape(field)}, expected equal ones, 3 first"
+        )
+    sums = _Sums()
+    sums.add(reference, field, 1.0 if weights is None else weights)
+    return sums.figures()
+
+
+def compare_fluxes(reference: FaceFlux, field: FaceFlux) -> VectorFigures:
+    """Figures of the mean fields of all cells, weighted by their volumes.
+
+    Parameters
+    ----------
+    reference, field : FaceFlux
+        On grids with all nodes in the same places.
+
+    Returns
+    -------
+    VectorFigures
+
+    Raises
+    ------
+    FieldError
+        If the grids differ.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1])
+    >>> one = fm.flux_from_function(grid, lambda x, y, z: (1 + 0 * x, 0 * y, 0 * z))
+    >>> other = fm.flux_from_function(grid, lambda x, y, z: (3 + 0 * x, 0 * y, 0 * z))
+    >>> round(compare_fluxes(one, other).energy_ratio, 12)
+    9.0
+    """
+    if not same_place(reference.grid, field.grid):
+        raise FieldError(
+            f"fields to compare: on {reference.grid!r} and {field.grid!r}, expected nodes in the same places"
+        )
+    sums = _Sums()
+    for rows in cell_slabs(reference.grid):
+        (first, volumes), (second, _) = mean_field(reference, rows), mean_field(field, rows)
+        sums.add(first, second, volumes)
+    return sums.figures()
+
+
+def differences(before: Mapping[str, Any], after: Mapping[str, Any]) -> dict[str, Difference]:
+    """Figure by figure what changed, for all names that both sets have.
+
+    Parameters
+    ----------
+    before, after : mappings
+        As `Diagnosis.as_dict` gives them.
+
+    Returns
+    -------
+    dict
+        Dotted name to `Difference`, in the order of `before`.
+
+    Examples
+    --------
+    >>> differences({"energy": {"total": 2.0}}, {"energy": {"total": 1.5}})["energy.total"].relative
+    -0.25
+    """
+    old, new = flattened(before), flattened(after)
+    return {name: _difference(value, new[name]) for name, value in old.items() if name in new}
+
+
+def _difference(before: float | None, after: float | None) -> Difference:
+    if before is None or after is None:
+        return Difference(before, after, None, None)
+    change = after - before
+    return Difference(before, after, change, change / abs(before) if before else None)
+
+
+@dataclass
+class _Sums:
+    """What the figures are made of; `both` and `one` are for means over points where fields do not vanish."""
+
+    product: float = 0.0
+    square: float = 0.0
+    other_square: float = 0.0
+    size: float = 0.0
+    gap: float = 0.0
+    cosine: float = 0.0
+    error: float = 0.0
+    both: float = 0.0
+    one: float = 0.0
+
+    def add(self, B: Array, b: Array, weights: Array | float) -> None:
+        product, square, other = (np.einsum("i...,i...", p, q) for p, q in ((B, b), (B, B), (b, b)))
+        size, gap = np.sqrt(square), np.sqrt(((b - B) ** 2).sum(axis=0))
+        both, one = (square > 0) & (other > 0), square > 0
+        self.product += float((product * weights).sum())
+        self.square += float((square * weights).sum())
+        self.other_square += float((other * weights).sum())
+        self.size += float((size * weights).sum())
+        self.gap += float((gap * weights).sum())
+        cosine = np.divide(product, size * np.sqrt(other), out=np.zeros_like(product), where=both)
+        self.cosine += float((cosine * weights).sum())
+        self.error += float((np.divide(gap, size, out=np.zeros_like(gap), where=one) * weights).sum())
+        self.both += float((both * weights).sum())
+        self.one += float((one * weights).sum())
+
+    def figures(self) -> VectorFigures:
+        return VectorFigures(
+            _ratio(self.product, float(np.sqrt(self.square * self.other_square))),
+            _ratio(self.cosine, self.both),
+            _ratio(self.gap, self.size),
+            _ratio(self.error, self.one),
+            _ratio(self.other_square, self.square),
+        )
+
+
+def _ratio(above: float, below: float) -> float | None:
+    """None where there is no finite quotient."""
+    return above / below if below > 0 and np.isfinite(above / below) else None
