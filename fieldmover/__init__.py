@@ -33,7 +33,8 @@ if TYPE_CHECKING:
     )
     from fieldmover.grids import Grid, cartesian_grid, cylindrical_grid, spherical_grid, warped_grid
     from fieldmover.interpolation import cells_from_flux, flux_from_cells, move_content, move_flux
-    from fieldmover.projection import potential, project
+    from fieldmover.projection.potential import potential
+    from fieldmover.projection.project import project
 
 _HOME = {
     "grids": ("Grid", "cartesian_grid", "cylindrical_grid", "spherical_grid", "warped_grid"),

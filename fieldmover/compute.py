@@ -41,7 +41,7 @@ def _cache_folder() -> str | None:
 
 _folder = _cache_folder()
 if _folder is not None:
-    numba.config.CACHE_DIR = _folder
+    numba.config.CACHE_DIR = _folder  # type: ignore[attr-defined]
 
 
 def kernel(function: Callable) -> Callable:

@@ -1,0 +1,147 @@
+"""How a cleaning is solved: the operator that walls, weights and masks make, and the way to solve it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal, get_args
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from fieldmover.errors import FieldError
+from fieldmover.forms.fields import FaceFlux, Three
+from fieldmover.forms.measures import Factors, face_conductances, face_factors
+from fieldmover.grids.grid import Grid, at
+from fieldmover.projection.nearest import common_scale, nearest_factors, weakened_cells
+from fieldmover.projection.operator import ProjectionOperator, Walls
+from fieldmover.projection.request import (
+    Masks,
+    WallsLike,
+    WeightsLike,
+    excised_mask,
+    face_weights,
+    frozen_masks,
+    hole_axis,
+    open_walls,
+)
+
+Array = NDArray[np.float64]
+Mask = NDArray[np.bool_]
+Hole = Literal["neutral", "free"]
+
+
+@dataclass(frozen=True, eq=False)
+class Plan:
+    """The operator of a cleaning and its nearest separable one.
+
+    Attributes
+    ----------
+    operator : ProjectionOperator
+    factors : nested tuple of ndarrays
+        Of a separable operator, near to it or equal.
+    direct : bool
+        Whether they are equal.
+    scale, weakened
+        Helps for the preconditioner where they are not (`nearest.Preconditioner`).
+    metric : bool
+        Whether the operator's conductances are those of the grid, on all faces.
+    frozen, free : tuple of three bool ndarrays, or None
+        Faces that keep their bits; faces that may change (None where there are no masks).
+    excised : bool ndarray or None
+    """
+
+    operator: ProjectionOperator
+    factors: Factors
+    direct: bool
+    scale: Array | None
+    weakened: tuple[NDArray[np.intp], Array] | None
+    metric: bool
+    frozen: Masks | None
+    free: Masks | None
+    excised: Mask | None
+
+
+def make_plan(
+    flux: FaceFlux,
+    walls: WallsLike,
+    weights: WeightsLike | None,
+    frozen: Sequence[ArrayLike] | None,
+    excised: ArrayLike | None,
+    hole: Hole,
+) -> Plan:
+    """Check what a caller of `project` asks for, and plan it; arguments and errors are those of `project`."""
+    if hole not in get_args(Hole):
+        raise FieldError(f"hole: {hole!r}, expected 'neutral' or 'free'")
+    grid = flux.grid
+    is_open, frozen_faces, cut = (
+        open_walls(grid, walls),
+        frozen_masks(grid, frozen),
+        excised_mask(grid, excised),
+    )
+    conductances = face_conductances(grid)
+    user = face_weights(flux, weights, conductances)
+    factors = face_factors(grid) if user is None else None
+    if user is not None:
+        for g, w in zip(conductances, user, strict=True):
+            g /= w
+    free, active = None, np.ones(grid.shape, dtype=bool)
+    if frozen_faces is not None or cut is not None:
+        free = _free_faces(conductances, frozen_faces, is_open, grid)
+        active = _touched(free) if cut is None else _touched(free) & ~cut
+    direct = factors is not None and free is None
+    if factors is None:
+        factors = nearest_factors(conductances, free)
+    scale = None if user is None else common_scale(conductances, factors)
+    weakened = None
+    if frozen_faces is not None:
+        whole = _sums_over_faces(conductances)
+        for g, mask in zip(conductances, frozen_faces, strict=True):
+            g[mask] = 0.0
+        weakened = weakened_cells(whole, _sums_over_faces(conductances) * active)
+        is_open = _open_somewhere(is_open, conductances)
+    around = hole_axis(grid)
+    neutral = hole == "neutral" and around is not None and is_open[around][0]
+    operator = ProjectionOperator(conductances, active, grid.periodic, is_open, around if neutral else None)
+    metric = user is None and frozen_faces is None
+    return Plan(operator, factors, direct, scale, weakened, metric, frozen_faces, free, cut)
+
+
+def _free_faces(conductances: Three, frozen: Masks | None, is_open: Walls, grid: Grid) -> Masks:
+    """Faces that may change."""
+    free = []
+    for axis in range(3):
+        mask = conductances[axis] > 0
+        if frozen is not None:
+            mask &= ~frozen[axis]
+        for side in (0, 1):
+            if not (is_open[axis][side] or grid.periodic[axis]):
+                mask[at(axis, -side)] = False
+        free.append(mask)
+    return free[0], free[1], free[2]
+
+
+def _open_somewhere(is_open: Walls, conductances: Three) -> Walls:
+    """The walls with a face that may change."""
+    pairs = [
+        (low and bool(g[at(axis, 0)].any()), high and bool(g[at(axis, -1)].any()))
+        for axis, (g, (low, high)) in enumerate(zip(conductances, is_open, strict=True))
+    ]
+    return pairs[0], pairs[1], pairs[2]
+
+
+def _sums_over_faces(conductances: Three) -> Array:
+    """Sum over the six faces of every cell."""
+    total = np.zeros(conductances[0][:-1].shape)
+    for axis, g in enumerate(conductances):
+        total += g[at(axis, slice(None, -1))]
+        total += g[at(axis, slice(1, None))]
+    return total
+
+
+def _touched(faces: Masks) -> Mask:
+    """Cells with a face in a mask."""
+    touched = np.zeros(faces[0][:-1].shape, dtype=bool)
+    for axis, mask in enumerate(faces):
+        touched |= mask[at(axis, slice(None, -1))] | mask[at(axis, slice(1, None))]
+    return touched
