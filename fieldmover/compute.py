@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import os
 import tempfile
+from collections import deque
 from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
@@ -78,12 +79,35 @@ def threads() -> int:
 
 
 def for_each(work: Callable[[Item], Result], items: Iterable[Item]) -> list[Result]:
-    """Call `work` on every item, spread over the threads; results in the order of the items."""
+    """Call `work` on every item, spread over the threads; results in the order of the items.
+
+    Threads take items one by one, in order. After an error no more are taken, and of several errors that of the
+    first item is raised: the same one on any number of threads.
+    """
     items = list(items)
-    if _threads == 1 or len(items) < 2:
+    helpers = min(_threads, len(items)) - 1
+    if helpers < 1:
         return [work(item) for item in items]
-    with ThreadPoolExecutor(_threads) as pool:
-        return list(pool.map(work, items))
+    waiting, results, errors = deque(enumerate(items)), {}, {}
+
+    def take() -> None:
+        while not errors:
+            try:
+                place, item = waiting.popleft()
+            except IndexError:
+                return
+            try:
+                results[place] = work(item)
+            except BaseException as error:
+                errors[place] = error
+
+    with ThreadPoolExecutor(helpers) as pool:
+        for _ in range(helpers):
+            pool.submit(take)
+        take()
+    if errors:
+        raise errors[min(errors)]
+    return [results[place] for place in range(len(items))]
 
 
 def slabs(length: int, size: int) -> list[slice]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -176,7 +176,9 @@ def _open(q1: Array, q2: Array, q3: Array) -> Triple:
     return q1[:, None, None], q2[None, :, None], q3[None, None, :]
 
 
-def quadrature(grid: Grid, along: list[int], points: list):
+def quadrature(
+    grid: Grid, along: list[int], points: list[tuple[tuple[float, float], ...]]
+) -> Iterator[tuple[slice, list[Array], Array]]:
     """Yield (rows, q, weight) for every slab of axis 1 and every quadrature point of a face, edge or cell.
 
     `along` are the axes integrated over; `points` holds, for each point, one (abscissa in [-1, 1], weight) per
@@ -389,12 +391,16 @@ def warped_grid(
     1.0
     """
     nodes = (checked_nodes(q1, "q1"), checked_nodes(q2, "q2"), checked_nodes(q3, "q3"))
-    seams = _three(periodic, "periodic", (True, False))
-    ends = _three(poles, "poles", (None, "low", "high", "both"))
+    seams, ends = checked_ends(periodic, poles)
     steps = tuple(float(0.01 * np.diff(q).min()) for q in nodes)
     grid = Grid(WarpedMap(to_cartesian, (steps[0], steps[1], steps[2])), nodes, seams, ends)
     _check_map(grid)
     return grid
+
+
+def checked_ends(periodic: tuple, poles: tuple) -> tuple[tuple[bool, bool, bool], tuple[Poles, Poles, Poles]]:
+    """The arguments `periodic` and `poles`, or an error that says what is wrong with them."""
+    return _three(periodic, "periodic", (True, False)), _three(poles, "poles", (None, "low", "high", "both"))
 
 
 def _three(values: tuple, name: str, allowed: tuple) -> tuple:

@@ -22,8 +22,11 @@ Triple = tuple[Array, Array, Array]
 class Map(Protocol):
     """What a grid needs to know of its coordinates."""
 
-    kind: str
-    names: tuple[str, str, str]
+    @property
+    def kind(self) -> str: ...
+
+    @property
+    def names(self) -> tuple[str, str, str]: ...
 
     def to_cartesian(self, q1: Array, q2: Array, q3: Array) -> Triple: ...
 

@@ -35,7 +35,7 @@ class PotentialSpline:
     def __init__(self, pot: EdgePotential, order: int) -> None:
         self.grid: Grid = pot.grid
         self.order = order
-        splines = grid_splines(pot.grid, order)
+        splines = grid_splines(pot.grid, order, sharp=True)
         parts = [fit_form(pot.grid, splines, a, (axis,)) for axis, a in enumerate(pot.edges)]
         self._tables = tuple(_table(spline) for spline in splines)
         self._coefficients = tuple(part.ravel() for part in parts)
@@ -99,7 +99,7 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
     kernels call `covector` at one place only, so that it is inlined.
     """
     width = order + 1
-    cells, powers = cell_shape(order)
+    cells, powers = cell_shape(order, sharp=True)
 
     @compute.fast_kernel
     def hunt(value, nodes, cell):

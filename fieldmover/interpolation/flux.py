@@ -8,6 +8,7 @@ double precision.
 from __future__ import annotations
 
 from functools import partial
+from itertools import product
 from typing import Literal, get_args
 
 import numpy as np
@@ -18,6 +19,7 @@ from fieldmover.errors import FieldError
 from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges
 from fieldmover.forms.incidence import d1
 from fieldmover.grids.grid import Grid, at
+from fieldmover.interpolation.aligned import move_aligned, same_coordinates
 from fieldmover.interpolation.coverage import Outside, fill, known_faces
 from fieldmover.interpolation.evaluate import PotentialSpline
 from fieldmover.interpolation.lines import integrate_lines
@@ -28,7 +30,7 @@ Array = NDArray[np.float64]
 Known = tuple[NDArray[np.bool_], NDArray[np.bool_], NDArray[np.bool_]]
 Order = Literal[1, 3, 5]
 
-_NODES = 1 << 16  # nodes located at a time
+_BRICK = (16, 16, 32)  # nodes located together: their part of the source's coefficients stays in cache
 _EDGES = 1 << 12  # edges that are not on the lattice of nodes, at a time
 _MOST_PIECES = 16
 
@@ -80,8 +82,7 @@ def move_flux(flux: FaceFlux, target: Grid, order: Order = 3, outside: Outside =
     if outside not in get_args(Outside):
         raise FieldError(f"outside: {outside!r}, expected one of {', '.join(map(repr, get_args(Outside)))}")
     edges, known = move_potential(potential(flux), target, order)
-    quantum = _round_edges(edges)
-    faces = d1(edges)
+    faces, quantum = _exact_curl(edges)
     covered = known_faces(known)
     if all(c.all() for c in covered):
         return FaceFlux(target, faces)
@@ -105,6 +106,19 @@ def move_potential(pot: EdgePotential, target: Grid, order: Order = 3) -> tuple[
     known : tuple of three bool ndarrays
         Edges that lie wholly in the source.
     """
+    move = move_aligned if same_coordinates(pot.grid, target) else _move_across
+    edges, known = move(pot, target, order)
+    close_edges(target, edges)
+    for axis in range(3):
+        for mask in known:
+            if target.periodic[axis] and mask.shape[axis] > target.shape[axis]:
+                mask[at(axis, 0)] &= mask[at(axis, -1)]
+                mask[at(axis, -1)] = mask[at(axis, 0)]
+    return edges, known
+
+
+def _move_across(pot: EdgePotential, target: Grid, order: Order) -> tuple[Three, Known]:
+    """Edges of a grid in other coordinates: from nodes where that is good enough, else from points of their own."""
     spline, locator = PotentialSpline(pot, order), Locator(pot.grid)
     edges = [np.full(target.edge_shape(d), np.nan) for d in range(3)]
     reached = _from_nodes(spline, locator, target, edges)
@@ -118,9 +132,7 @@ def move_potential(pot: EdgePotential, target: Grid, order: Order = 3) -> tuple[
             values[tuple(missing[part].T)] = integrals
         known.append(np.isfinite(values))
         values[~known[axis]] = 0.0
-    result: Three = (edges[0], edges[1], edges[2])
-    close_edges(target, result)
-    return result, (known[0], known[1], known[2])
+    return (edges[0], edges[1], edges[2]), (known[0], known[1], known[2])
 
 
 def _from_nodes(spline: PotentialSpline, locator: Locator, target: Grid, edges: list[Array]) -> NDArray[np.bool_]:
@@ -133,32 +145,24 @@ def _from_nodes(spline: PotentialSpline, locator: Locator, target: Grid, edges: 
     longest = [np.maximum(np.diff(q, append=q[-1]), np.diff(q, prepend=q[0])) for q in target.nodes]
     allowed = _cells_allowed(spline.grid)
 
-    def work(rows: slice) -> None:
-        first, second, third = target.nodes[0][rows], target.nodes[1], target.nodes[2]
+    def work(brick: tuple[slice, slice, slice]) -> None:
+        first, second, third = (q[part] for q, part in zip(target.nodes, brick, strict=True))
         nodes = (first[:, None, None], second[None, :, None], third[None, None, :])
         x = np.stack(target.map.to_cartesian(*nodes))
         shape = x.shape[1:]
         q, dq = locator.pull_back(x.reshape(3, -1), target.map.jacobian(*nodes).reshape(3, 3, -1))
         here = inside(spline.grid, q)
-        reached[rows] = here.reshape(shape)
+        reached[brick] = here.reshape(shape)
         if not rates:
             return
         q[:, ~here] = np.nan
         covectors = spline.covectors(q).reshape(3, *shape)
-        steps = (longest[0][rows], longest[1], longest[2])
-        parts = (rate[rows] for rate in rates)
-        _rates(
-            q.reshape(3, *shape),
-            dq.reshape(3, 3, *shape),
-            covectors,
-            *steps,
-            *spline.grid.nodes,
-            allowed,
-            *parts,
-        )
+        steps = (step[part] for step, part in zip(longest, brick, strict=True))
+        parts = (rate[brick] for rate in rates)
+        _rates(q.reshape(3, *shape), dq.reshape(3, 3, *shape), covectors, *steps, *spline.grid.nodes, allowed, *parts)
 
-    n1, n2, n3 = target.node_shape()
-    compute.for_each(work, compute.slabs(n1, max(1, _NODES // (n2 * n3))))
+    bricks = product(*(compute.slabs(n, size) for n, size in zip(target.node_shape(), _BRICK, strict=True)))
+    compute.for_each(work, bricks)
     for axis, rate in enumerate(rates):
         integrate_lines(rate, axis, target.nodes[axis], target.periodic[axis], edges[axis])
     return reached
@@ -249,20 +253,36 @@ def _pieces(source: Grid, q: Array, part: float) -> NDArray[np.int64]:
     return np.asarray(2 ** np.ceil(np.log2(np.minimum(most, _MOST_PIECES))), dtype=np.int64)
 
 
-def _round_edges(edges: Three) -> float:
-    """Round edge values, in place, to multiples of the power of two that is returned."""
-    largest = max(max(float(a.max()), -float(a.min())) for a in edges)
-    if largest == 0.0:
-        return 0.0
-    quantum = float(2.0 ** (np.ceil(np.log2(largest)) - 49))  # sums of 24 edges stay below 2^53 quanta
+def _exact_curl(edges: Three) -> tuple[Three, float]:
+    """Round edge values, in place, so that d1 and d2 add them without rounding; faces and the quantum.
 
+    Sums of four edges and of six faces must stay below 2^53 quanta.
+    """
+    largest = _largest(edges)
+    if largest == 0.0:
+        return d1(edges), 0.0
+    quantum = 2.0 ** (np.ceil(np.log2(largest)) - 51)
+    _round(edges, quantum)
+    faces = d1(edges)
+    least = 2.0 ** (np.ceil(np.log2(max(_largest(faces), quantum))) - 50)
+    if least > quantum:  # fluxes as large as circulations: noise, or a grid of few cells
+        quantum = 2.0 * least
+        _round(edges, quantum)
+        faces = d1(edges)
+    return faces, float(quantum)
+
+
+def _largest(arrays: Three) -> float:
+    return max(max(float(a.max()), -float(a.min())) for a in arrays)
+
+
+def _round(edges: Three, quantum: float) -> None:
     def work(part: Array) -> None:
         part /= quantum
         np.rint(part, out=part)
         part *= quantum
 
     compute.for_each(work, [a[rows] for a in edges for rows in compute.slabs(a.shape[0], 8)])
-    return quantum
 
 
 @compute.kernel

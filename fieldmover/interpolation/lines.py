@@ -84,50 +84,80 @@ def integrate_lines(rates: Array, axis: int, nodes: Array, periodic: bool, out: 
     for m in range(_INNER):
         row, column = np.nonzero(places == inner_places[:, m : m + 1])
         doubts[row, column] -= inner_weights[row, m]
-    steps = np.diff(nodes)
+    tables = (places, weights, doubts, np.diff(nodes))
     if axis == 0:  # planes of edges are independent
         compute.for_each(
-            lambda part: _sum(rates, places, weights, doubts, steps, part.start, part.stop, out),
-            compute.slabs(out.shape[0], _ROWS),
+            lambda part: _across_planes(rates, *tables, part.start, part.stop, out), compute.slabs(out.shape[0], _ROWS)
         )
     else:
-        compute.for_each(
-            lambda part: _sum_within(axis, rates[part], places, weights, doubts, steps, out[part]),
-            compute.slabs(out.shape[0], _ROWS),
-        )
+        kernel = _across_rows if axis == 1 else _along_rows
+        compute.for_each(lambda part: kernel(rates[part], *tables, out[part]), compute.slabs(out.shape[0], _ROWS))
 
 
 @compute.kernel
-def _integral(values, weights, doubts, step):
+def _integral(v0, v1, v2, v3, v4, v5, weights, doubts, step):
     """Weighted sum, or NaN where the sum of doubts is too large beside the range of the values."""
-    total, doubt, low, high = 0.0, 0.0, values[0], values[0]
-    for m in range(weights.size):
-        total += weights[m] * values[m]
-        doubt += doubts[m] * values[m]
-        low, high = min(low, values[m]), max(high, values[m])
-    size = max(abs(low), abs(high))
-    return total if abs(doubt) <= step * (_RESOLVED * (high - low) + 1e-13 * size) else np.nan
+    total = weights[0] * v0 + weights[1] * v1 + weights[2] * v2 + weights[3] * v3 + weights[4] * v4 + weights[5] * v5
+    doubt = doubts[0] * v0 + doubts[1] * v1 + doubts[2] * v2 + doubts[3] * v3 + doubts[4] * v4 + doubts[5] * v5
+    low, high = (
+        _less(_less(_less(v0, v1), _less(v2, v3)), _less(v4, v5)),
+        _more(_more(_more(v0, v1), _more(v2, v3)), _more(v4, v5)),
+    )
+    allowed = step * (_RESOLVED * (high - low) + 1e-13 * _more(high, -low))
+    return total if abs(doubt) <= allowed else np.nan
 
 
 @compute.kernel
-def _sum(rates, places, weights, doubts, steps, start, stop, out):
-    values = np.empty(weights.shape[1])
+def _less(a, b):
+    return a if a < b else b
+
+
+@compute.kernel
+def _more(a, b):
+    return a if a > b else b
+
+
+@compute.kernel
+def _row(r0, r1, r2, r3, r4, r5, weights, doubts, step, out):
+    for k in range(out.size):
+        out[k] = _integral(r0[k], r1[k], r2[k], r3[k], r4[k], r5[k], weights, doubts, step)
+
+
+@compute.kernel
+def _across_planes(rates, places, weights, doubts, steps, start, stop, out):
     for i in range(start, stop):
+        p, w, d = places[i], weights[i], doubts[i]
         for j in range(out.shape[1]):
-            for k in range(out.shape[2]):
-                for m in range(values.size):
-                    values[m] = rates[places[i, m], j, k]
-                out[i, j, k] = _integral(values, weights[i], doubts[i], steps[i])
+            _row(
+                rates[p[0], j],
+                rates[p[1], j],
+                rates[p[2], j],
+                rates[p[3], j],
+                rates[p[4], j],
+                rates[p[5], j],
+                w,
+                d,
+                steps[i],
+                out[i, j],
+            )
 
 
 @compute.kernel
-def _sum_within(axis, rates, places, weights, doubts, steps, out):
-    values = np.empty(weights.shape[1])
+def _across_rows(rates, places, weights, doubts, steps, out):
+    for i in range(out.shape[0]):
+        r = rates[i]
+        for j in range(out.shape[1]):
+            p, w, d = places[j], weights[j], doubts[j]
+            _row(r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], w, d, steps[j], out[i, j])
+
+
+@compute.kernel
+def _along_rows(rates, places, weights, doubts, steps, out):
     for i in range(out.shape[0]):
         for j in range(out.shape[1]):
+            r = rates[i, j]
             for k in range(out.shape[2]):
-                e = j if axis == 1 else k
-                for m in range(values.size):
-                    p = places[e, m]
-                    values[m] = rates[i, p, k] if axis == 1 else rates[i, j, p]
-                out[i, j, k] = _integral(values, weights[e], doubts[e], steps[e])
+                p = places[k]
+                out[i, j, k] = _integral(
+                    r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], weights[k], doubts[k], steps[k]
+                )

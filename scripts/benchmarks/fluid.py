@@ -29,7 +29,8 @@ def run(arguments: list[str]) -> None:
 
 
 def _time(n: int, runs: int) -> None:
-    source = spherical_grid(np.geomspace(1, 3, n + 1), np.linspace(0, np.pi, n + 1), np.linspace(0, 2 * np.pi, 2 * n + 1))
+    theta, phi = np.linspace(0, np.pi, n + 1), np.linspace(0, 2 * np.pi, 2 * n + 1)
+    source = spherical_grid(np.geomspace(1, 3, n + 1), theta, phi)
     target = cartesian_grid(*[np.linspace(-1.6, -0.7, n + 1)] * 3)
     content = CellContent(source, source.cell_volumes())
     plan = FluidPlan(source, target)
@@ -56,7 +57,7 @@ def _time(n: int, runs: int) -> None:
 
 
 def _errors(sizes: list[int]) -> None:
-    print("\nMean error of the density over covered cells: of a constant, of a smooth density relative to that; total kept")
+    print("\nMean error of the density where covered: constant; smooth, relative to the constant; total")
     for name, grids in {**INSIDE, **ACROSS}.items():
         row = []
         for n in sizes:
