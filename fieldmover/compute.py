@@ -11,10 +11,12 @@ import tempfile
 from collections import deque
 from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
+from functools import cache
 from pathlib import Path
 from typing import TypeVar
 
 import numba
+from threadpoolctl import ThreadpoolController
 
 from fieldmover._version import __version__
 
@@ -43,6 +45,11 @@ def _cache_folder() -> str | None:
 _folder = _cache_folder()
 if _folder is not None:
     numba.config.CACHE_DIR = _folder  # type: ignore[attr-defined]
+
+
+def cache_lacks(module: str) -> bool:
+    """Whether there is a cache, and no kernel of the module of that name in it."""
+    return _folder is not None and not any(Path(_folder).glob(f"*/{module}.*.nbi"))
 
 
 def kernel(function: Callable) -> Callable:
@@ -82,13 +89,12 @@ def for_each(work: Callable[[Item], Result], items: Iterable[Item]) -> list[Resu
     """Call `work` on every item, spread over the threads; results in the order of the items.
 
     Threads take items one by one, in order. After an error no more are taken, and of several errors that of the
-    first item is raised: the same one on any number of threads.
+    first item is raised: the same one on any number of threads. Matrix products within `work` use one thread each.
     """
-    items = list(items)
-    helpers = min(_threads, len(items)) - 1
-    if helpers < 1:
-        return [work(item) for item in items]
-    waiting, results, errors = deque(enumerate(items)), {}, {}
+    waiting = deque(enumerate(items))
+    helpers = min(_threads, len(waiting)) - 1
+    results: dict[int, Result] = {}
+    errors: dict[int, BaseException] = {}
 
     def take() -> None:
         while not errors:
@@ -101,13 +107,23 @@ def for_each(work: Callable[[Item], Result], items: Iterable[Item]) -> list[Resu
             except BaseException as error:
                 errors[place] = error
 
-    with ThreadPoolExecutor(helpers) as pool:
-        for _ in range(helpers):
-            pool.submit(take)
-        take()
+    with _libraries().limit(limits=1, user_api="blas"):
+        if helpers > 0:
+            with ThreadPoolExecutor(helpers) as pool:
+                for _ in range(helpers):
+                    pool.submit(take)
+                take()
+        else:
+            take()
     if errors:
         raise errors[min(errors)]
-    return [results[place] for place in range(len(items))]
+    return [results[place] for place in sorted(results)]
+
+
+@cache
+def _libraries() -> ThreadpoolController:
+    """The libraries with threads of their own, which would compete with ours for the processors."""
+    return ThreadpoolController()
 
 
 def slabs(length: int, size: int) -> list[slice]:

@@ -330,31 +330,50 @@ def fit(data: Array, line: LineFit, axis: int, opposite: NDArray[np.int64] | Non
     """
     data = np.ascontiguousarray(data)
     shape = data.shape
-    lines, inner = data.size // shape[axis], int(np.prod(shape[axis + 1 :]))
     out = np.empty((*shape[:axis], line.take.size, *shape[axis + 1 :]))
-    across = np.empty(0, dtype=np.int64) if opposite is None else opposite
+    strides = tuple(step // out.itemsize for step in out.strides)
     compute.for_each(
-        lambda part: _fit_lines(
-            data.reshape(-1),
-            shape[axis],
-            inner,
-            part.start,
-            part.stop,
-            across,
-            sign,
-            line.gather,
-            line.mirrored,
-            line.lower,
-            line.upper,
-            line.border,
-            line.border_row,
-            line.corner,
-            line.take,
-            out.reshape(-1),
-        ),
-        compute.slabs(lines, _LINES),
+        lambda part: fit_lines(data, line, axis, part, out.reshape(-1), strides, 0, opposite, sign),
+        compute.slabs(data.size // shape[axis], _LINES),
     )
     return out
+
+
+def fit_lines(
+    data: Array,
+    line: LineFit,
+    axis: int,
+    part: slice,
+    out: Array,
+    strides: tuple[int, ...],
+    offset: int,
+    opposite: Index | None = None,
+    sign: float = 1.0,
+) -> None:
+    """As `fit`, for some of the lines, into any place.
+
+    Parameters
+    ----------
+    data : ndarray, 3-D, C order
+    line, axis, opposite, sign
+        As for `fit`.
+    part : slice
+        Of the lines, counted in the order of the other two axes.
+    out : ndarray, 1-D
+    strides : tuple of three int
+        Steps in `out` along the three axes.
+    offset : int
+        Where in `out` the first coefficient of the first line goes.
+    """
+    others = [d for d in range(3) if d != axis]
+    inner = data.shape[others[1]]
+    in_strides = [step // data.itemsize for step in data.strides]
+    across = np.empty(0, dtype=np.int64) if opposite is None else opposite
+    steps = np.array([[s[others[0]], s[others[1]], s[axis]] for s in (in_strides, strides)], dtype=np.int64)
+    _fit_lines(
+        data.reshape(-1), inner, part.start, part.stop, steps, across, sign, line.gather, line.mirrored, line.lower,
+        line.upper, line.border, line.border_row, line.corner, line.take, offset, out,
+    )  # fmt: skip
 
 
 def opposite_lines(shape: tuple[int, ...], axis: int, ring: int, cells: int) -> Index:
@@ -378,50 +397,35 @@ def opposite_lines(shape: tuple[int, ...], axis: int, ring: int, cells: int) -> 
 
 @compute.kernel
 def _fit_lines(
-    data,
-    rows,
-    inner,
-    start,
-    stop,
-    opposite,
-    sign,
-    gather,
-    mirrored,
-    lower,
-    upper,
-    border,
-    border_row,
-    corner,
-    take,
-    out,
-):
-    """Fit lines start to stop; line l begins at (l // inner) * rows * inner + l % inner and steps by inner."""
+    data, inner, start, stop, steps, opposite, sign, gather, mirrored, lower, upper, border, border_row, corner, take,
+    offset, out,
+):  # fmt: skip
+    """Fit lines start to stop; line l is number l // inner, l % inner along the other axes.
+
+    Rows of `steps`: along the two other axes and along the line, in the data and in the result.
+    """
     size, s = gather.size, border.shape[1]
     banded = size - s
     block, tail, across = np.empty((size, _COLUMNS)), np.empty(s), np.empty(_COLUMNS, np.int64)
     begin = start
     while begin < stop:
         row, column = begin // inner, begin % inner
-        width = min(_COLUMNS, stop - begin)
-        if inner > 1:
-            width = min(width, inner - column)  # contiguous in memory
-        base, base_out = row * rows * inner + column, row * take.size * inner + column
+        width = min(_COLUMNS, stop - begin, inner - column)
+        base = row * steps[0, 0] + column * steps[0, 1]
+        base_out = offset + row * steps[1, 0] + column * steps[1, 1]
         if opposite.size > 0:
             for w in range(width):
-                line = opposite[begin + w]
-                across[w] = line // inner * rows * inner + line % inner
+                other = opposite[begin + w]
+                across[w] = other // inner * steps[0, 0] + other % inner * steps[0, 1]
         for e in range(size):
-            step = base + gather[e] * inner
+            step = gather[e] * steps[0, 2]
             if mirrored[e]:
                 for w in range(width):
-                    block[e, w] = sign * data[across[w] + gather[e] * inner]
-            elif inner > 1:
-                block[e, :width] = data[step : step + width]
+                    block[e, w] = sign * data[across[w] + step]
             else:
                 for w in range(width):
-                    block[e, w] = data[step + w * rows]
-        part = block[:, :width]
-        _banded_solve(lower, upper, part[:banded])
+                    block[e, w] = data[base + step + w * steps[0, 1]]
+        _banded_solve(lower, upper, block[:banded, :width])
         if s > 0:
             for b in range(s):
                 for i in range(banded):
@@ -441,15 +445,9 @@ def _fit_lines(
                     for w in range(width):
                         block[i, w] -= ratio * block[banded + b, w]
         for j in range(take.size):
-            step = base_out + j * inner
-            if take[j] < 0:
-                for w in range(width):
-                    out[step + (w if inner > 1 else w * take.size)] = 0.0
-            elif inner > 1:
-                out[step : step + width] = block[take[j], :width]
-            else:
-                for w in range(width):
-                    out[step + w * take.size] = block[take[j], w]
+            step = base_out + j * steps[1, 2]
+            for w in range(width):
+                out[step + w * steps[1, 1]] = block[take[j], w] if take[j] >= 0 else 0.0
         begin += width
 
 

@@ -16,6 +16,7 @@ from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, close_faces
 from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, at
+from fieldmover.grids.placement import placement, turned
 from fieldmover.interpolation.splines import (
     axis_spline,
     crosses_pole,
@@ -130,12 +131,14 @@ def cells_from_flux(flux: FaceFlux, basis: Basis = "cartesian") -> Array:
     _check_basis(basis)
     grid = flux.grid
     if grid.kind == "cartesian":
-        return np.stack(
+        means = np.stack(
             [
                 _mean_of_faces(f, area, axis)
                 for axis, (f, area) in enumerate(zip(flux.faces, grid.face_areas(), strict=True))
             ]
         )
+        frame = placement(grid) if basis == "cartesian" else None
+        return means if frame is None else turned(frame[1], means)
     densities = _densities_at_centres(flux)
     out = np.empty((3, *grid.shape))
 

@@ -36,10 +36,17 @@ class PotentialSpline:
         self.grid: Grid = pot.grid
         self.order = order
         splines = grid_splines(pot.grid, order, sharp=True)
-        parts = [fit_form(pot.grid, splines, a, (axis,)) for axis, a in enumerate(pot.edges)]
+        shapes = [
+            [spline.cells.take.size if axis == d else spline.values.take.size for d, spline in enumerate(splines)]
+            for axis in range(3)
+        ]
+        # The three components lie side by side, so that those of a point share cache lines.
+        coefficients = np.empty((*(max(sizes) for sizes in zip(*shapes, strict=True)), 3))
+        for axis, (a, (m1, m2, m3)) in enumerate(zip(pot.edges, shapes, strict=True)):
+            fit_form(pot.grid, splines, a, (axis,), coefficients[:m1, :m2, :m3, axis])
         self._tables = tuple(_table(spline) for spline in splines)
-        self._coefficients = tuple(part.ravel() for part in parts)
-        self._strides = np.array([(part.shape[1] * part.shape[2], part.shape[2]) for part in parts], dtype=np.uint64)
+        self._coefficients = coefficients.ravel()
+        self._strides = np.array(coefficients.strides[:2], dtype=np.uint64) // np.uint64(8)
 
     def covectors(self, q: Array) -> Array:
         """Components A_i of the potential at points.
@@ -55,7 +62,7 @@ class PotentialSpline:
             Per unit of grid coordinate; NaN where left out.
         """
         out = np.empty_like(q)
-        _kernels(self.order)[0](q, *self._tables, *self._coefficients, self._strides, out)
+        _kernels(self.order)[0](q, *self._tables, self._coefficients, self._strides, out)
         return out
 
     def straight(self, start: Array, end: Array) -> Array:
@@ -76,7 +83,7 @@ class PotentialSpline:
         """
         out = np.empty(start.shape[1])
         turns = [np.ptp(n) if seam else 0.0 for n, seam in zip(self.grid.nodes, self.grid.periodic, strict=True)]
-        _kernels(self.order)[1](start, end, np.array(turns), *self._tables, *self._coefficients, self._strides, out)
+        _kernels(self.order)[1](start, end, np.array(turns), *self._tables, self._coefficients, self._strides, out)
         return out
 
 
@@ -125,48 +132,42 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
             c[m] = x
 
     @compute.fast_kernel
-    def covector(q1, q2, q3, cell1, cell2, cell3, t1, t2, t3, a1, a2, a3, strides, b1, b2, b3, c1, c2, c3):
+    def covector(q1, q2, q3, cell1, cell2, cell3, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3):
         basis(q1, t1, cell1, b1, c1)
         basis(q2, t2, cell2, b2, c2)
         basis(q3, t3, cell3, b3, c3)
         i, j, k = t1[3][cell1], t2[3][cell2], t3[3][cell3]
         ic, jc, kc = t1[4][cell1], t2[4][cell2], t3[4][cell3]
+        first, second, third = strides[0], strides[1], np.uint64(3)
+        i, j, k = first * i, second * j, third * k
+        ic, jc, kc = first * ic, second * jc, third * kc
         one, two, three = 0.0, 0.0, 0.0
         for r in range(cells):
             x = 0.0
             for s in range(width):
-                start, line = (
-                    (ic + np.uint64(r)) * strides[0, 0] + (j + np.uint64(s)) * strides[0, 1] + k,
-                    0.0,
-                )
+                at, line = ic + first * np.uint64(r) + j + second * np.uint64(s) + k, 0.0
                 for t in range(width):
-                    line += b3[t] * a1[start + np.uint64(t)]
+                    line += b3[t] * a[at + np.uint64(3 * t)]
                 x += b2[s] * line
             one += c1[r] * x
         for r in range(width):
-            y, z = 0.0, 0.0
+            row, y, z = i + first * np.uint64(r), 0.0, 0.0
             for s in range(cells):
-                start, line = (
-                    (i + np.uint64(r)) * strides[1, 0] + (jc + np.uint64(s)) * strides[1, 1] + k,
-                    0.0,
-                )
+                at, line = row + jc + second * np.uint64(s) + k + np.uint64(1), 0.0
                 for t in range(width):
-                    line += b3[t] * a2[start + np.uint64(t)]
+                    line += b3[t] * a[at + np.uint64(3 * t)]
                 y += c2[s] * line
             for s in range(width):
-                start, line = (
-                    (i + np.uint64(r)) * strides[2, 0] + (j + np.uint64(s)) * strides[2, 1] + kc,
-                    0.0,
-                )
+                at, line = row + j + second * np.uint64(s) + kc + np.uint64(2), 0.0
                 for t in range(cells):
-                    line += c3[t] * a3[start + np.uint64(t)]
+                    line += c3[t] * a[at + np.uint64(3 * t)]
                 z += b2[s] * line
             two += b1[r] * y
             three += b1[r] * z
         return one, two, three
 
     @compute.fast_kernel
-    def covectors(q, t1, t2, t3, a1, a2, a3, strides, out):
+    def covectors(q, t1, t2, t3, a, strides, out):
         b1, b2, b3 = np.empty(width), np.empty(width), np.empty(width)
         c1, c2, c3 = np.empty(cells), np.empty(cells), np.empty(cells)
         i, j, k = 0, 0, 0
@@ -176,7 +177,7 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
                 continue
             i, j, k = hunt(q[0, n], t1[0], i), hunt(q[1, n], t2[0], j), hunt(q[2, n], t3[0], k)
             out[0, n], out[1, n], out[2, n] = covector(
-                q[0, n], q[1, n], q[2, n], i, j, k, t1, t2, t3, a1, a2, a3, strides, b1, b2, b3, c1, c2, c3
+                q[0, n], q[1, n], q[2, n], i, j, k, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3
             )
 
     @compute.kernel
@@ -200,7 +201,7 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
         return cell
 
     @compute.kernel
-    def straight(start, end, turns, t1, t2, t3, a1, a2, a3, strides, out):
+    def straight(start, end, turns, t1, t2, t3, a, strides, out):
         b1, b2, b3 = np.empty(width), np.empty(width), np.empty(width)
         c1, c2, c3 = np.empty(cells), np.empty(cells), np.empty(cells)
         offset, change, at = np.empty((3, 2)), np.empty(3), np.empty(3)
@@ -224,7 +225,7 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
                     for d in range(3):
                         at[d] = start[d, n] + s * change[d] - offset[d, 0]
                     one, two, three = covector(
-                        at[0], at[1], at[2], i, j, k, t1, t2, t3, a1, a2, a3, strides, b1, b2, b3, c1, c2, c3
+                        at[0], at[1], at[2], i, j, k, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3
                     )
                     total += 0.5 * (there - here) * (one * change[0] + two * change[1] + three * change[2])
                 here = there

@@ -158,8 +158,10 @@ def _from_nodes(spline: PotentialSpline, locator: Locator, target: Grid, edges: 
         q[:, ~here] = np.nan
         covectors = spline.covectors(q).reshape(3, *shape)
         steps = (step[part] for step, part in zip(longest, brick, strict=True))
-        parts = (rate[brick] for rate in rates)
-        _rates(q.reshape(3, *shape), dq.reshape(3, 3, *shape), covectors, *steps, *spline.grid.nodes, allowed, *parts)
+        corner = (part.start for part in brick)
+        _rates(
+            q.reshape(3, *shape), dq.reshape(3, 3, *shape), covectors, *steps, *spline.grid.nodes, allowed, *corner, *rates
+        )
 
     bricks = product(*(compute.slabs(n, size) for n, size in zip(target.node_shape(), _BRICK, strict=True)))
     compute.for_each(work, bricks)
@@ -286,15 +288,16 @@ def _round(edges: Three, quantum: float) -> None:
 
 
 @compute.kernel
-def _rates(q, dq, covectors, steps1, steps2, steps3, nodes1, nodes2, nodes3, allowed, out1, out2, out3):
+def _rates(q, dq, covectors, steps1, steps2, steps3, nodes1, nodes2, nodes3, allowed, i0, j0, k0, out1, out2, out3):
     """A_i dq^i along each target axis; NaN where an edge there spans too many cells of the source."""
     cells, widths = np.zeros(3, np.int64), np.empty(3)
-    for i in range(out1.shape[0]):
-        for j in range(out1.shape[1]):
-            for k in range(out1.shape[2]):
+    for i in range(covectors.shape[1]):
+        for j in range(covectors.shape[2]):
+            for k in range(covectors.shape[3]):
                 a, b, c = covectors[0, i, j, k], covectors[1, i, j, k], covectors[2, i, j, k]
                 if np.isnan(a):
-                    out1[i, j, k] = out2[i, j, k] = out3[i, j, k] = np.nan
+                    for out in (out1, out2, out3):
+                        out[i0 + i, j0 + j, k0 + k] = np.nan
                     continue
                 cells[0] = _hunt(q[0, i, j, k], nodes1, cells[0])
                 cells[1] = _hunt(q[1, i, j, k], nodes2, cells[1])
@@ -309,11 +312,11 @@ def _rates(q, dq, covectors, steps1, steps2, steps3, nodes1, nodes2, nodes3, all
                     if abs(x) * step > widths[0] or abs(y) * step > widths[1] or abs(z) * step > widths[2]:
                         rate = np.nan
                     if d == 0:
-                        out1[i, j, k] = rate
+                        out1[i0 + i, j0 + j, k0 + k] = rate
                     elif d == 1:
-                        out2[i, j, k] = rate
+                        out2[i0 + i, j0 + j, k0 + k] = rate
                     else:
-                        out3[i, j, k] = rate
+                        out3[i0 + i, j0 + j, k0 + k] = rate
 
 
 @compute.kernel

@@ -68,9 +68,7 @@ class NewtonInverse:
             self._search(x, tangents, open_points, q, dq, state)
         return q, dq
 
-    def _search(
-        self, x: Array, tangents: Array, points: NDArray[np.intp], q: Array, dq: Array, state: State
-    ) -> None:
+    def _search(self, x: Array, tangents: Array, points: NDArray[np.intp], q: Array, dq: Array, state: State) -> None:
         """Try points again from places near them; those near none are outside."""
         count = min(_CANDIDATES, self._starts.reach.size)
         found = self._starts.tree.query(x[:, points].T, k=count, distance_upper_bound=self._starts.reach.max())
@@ -144,15 +142,16 @@ class _Starts:
         x = np.stack(spline.positions(lattice[0][:, None, None], lattice[1][None, :, None], lattice[2][None, None, :]))
         middle = x[:, 1::2, 1::2, 1::2]
         reach = np.zeros(middle.shape[1:])
-        for offset in np.ndindex(3, 3, 3):
-            corner = x[(slice(None), *(slice(o, o + 2 * m - 1, 2) for o, m in zip(offset, reach.shape, strict=True)))]
+        m1, m2, m3 = reach.shape
+        for a, b, c in np.ndindex(3, 3, 3):
+            corner = x[:, a : a + 2 * m1 - 1 : 2, b : b + 2 * m2 - 1 : 2, c : c + 2 * m3 - 1 : 2]
             reach = np.maximum(reach, np.sqrt(((corner - middle) ** 2).sum(axis=0)))
         q = np.stack([c.ravel() for c in np.meshgrid(*(c[1::2] for c in lattice), indexing="ij")])
         return cls(q, 1.25 * reach.ravel(), cKDTree(middle.reshape(3, -1).T), float(np.abs(x).max()))
 
 
-# Kernels: `frame` holds for each axis its ends (0, 1), the widths of its outermost cells (2, 3), the length of its seam or
-# 0 (4), the axis of the ring at its poles or -1 (5), and whether each end is a pole (6, 7).
+# In the kernels `frame` holds for each axis its ends (0, 1), the widths of its outermost cells (2, 3), the length of
+# its seam or 0 (4), the axis of the ring at its poles or -1 (5), and whether each end is a pole (6, 7).
 
 
 @compute.kernel

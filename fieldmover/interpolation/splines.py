@@ -5,11 +5,13 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from fieldmover import compute
 from fieldmover.grids.axis_splines import (
     AxisSpline,
     axis_spline,
     cell_shape,
     fit,
+    fit_lines,
     opposite_lines,
     unfolded,
     unfolded_sources,
@@ -29,6 +31,7 @@ __all__ = [
 ]
 
 Array = NDArray[np.float64]
+Index = NDArray[np.int64]
 
 
 def grid_splines(grid: Grid, degree: int, sharp: bool = False) -> tuple[AxisSpline, AxisSpline, AxisSpline]:
@@ -87,7 +90,11 @@ def _straight_across(grid: Grid, axis: int, end: int, ring: int) -> bool:
 
 
 def fit_form(
-    grid: Grid, splines: tuple[AxisSpline, AxisSpline, AxisSpline], data: Array, along: tuple[int, ...]
+    grid: Grid,
+    splines: tuple[AxisSpline, AxisSpline, AxisSpline],
+    data: Array,
+    along: tuple[int, ...],
+    out: Array | None = None,
 ) -> Array:
     """Spline coefficients of one component of a form.
 
@@ -100,18 +107,61 @@ def fit_form(
         node: () for a node function, (d,) for edges, two axes for faces, three for cells.
     along : tuple of int
 
+    out : ndarray, optional
+        Where to put the coefficients: any view, 3-D.
+
     Returns
     -------
     ndarray
         Coefficients, axis by axis as many as the splines have.
+
+    Notes
+    -----
+    After axis 1 the rest is done plane by plane, each staying in cache: two reads and writes of all values instead of
+    three.
     """
+    lines = [spline.cells if axis in along else spline.values for axis, spline in enumerate(splines)]
     crossing = [crosses_pole(grid, axis) for axis in range(3)]
-    for axis in sorted(range(3), key=lambda d: not crossing[d]):  # poles first: they pair columns of the ring
-        line = splines[axis].cells if axis in along else splines[axis].values
-        if crossing[axis]:
-            ring = grid.ring_of(axis)
-            opposite = opposite_lines(data.shape, axis, ring, grid.shape[ring])
-            data = fit(data, line, axis, opposite, -1.0 if axis in along else 1.0)
-        else:
-            data = fit(data, line, axis)
-    return data
+    if out is None:
+        out = np.empty([line.take.size for line in lines])
+
+    def pair(axis: int, shape: tuple[int, ...]) -> tuple[Index | None, float]:
+        """Lines across the pole, and what their values are multiplied by."""
+        if not crossing[axis]:
+            return None, 1.0
+        ring = grid.ring_of(axis)
+        return opposite_lines(shape, axis, ring, grid.shape[ring]), -1.0 if axis in along else 1.0
+
+    # An axis with poles pairs lines of its ring, so it goes before the ring.
+    within = (2, 1) if crossing[2] else (1, 2)
+    first = [axis for axis in range(3) if crossing[axis] and grid.ring_of(axis) == 0] + [0]
+    for axis in first:
+        data = fit(data, lines[axis], axis, *pair(axis, data.shape))
+    rest = [axis for axis in within if axis not in first]
+    planes = (1, *data.shape[1:])
+    pairs = [pair(axis, planes) for axis in rest]
+    flat, strides = _flat(out)
+
+    def work(i: int) -> None:
+        plane = np.ascontiguousarray(data[i : i + 1])
+        for axis, (opposite, sign) in zip(rest, pairs, strict=True):
+            every = slice(0, plane.size // plane.shape[axis])
+            if axis == rest[-1]:
+                fit_lines(plane, lines[axis], axis, every, flat, strides, i * strides[0], opposite, sign)
+                return
+            shape = list(plane.shape)
+            shape[axis] = lines[axis].take.size
+            fitted = np.empty(shape)
+            steps = tuple(step // fitted.itemsize for step in fitted.strides)
+            fit_lines(plane, lines[axis], axis, every, fitted.reshape(-1), steps, 0, opposite, sign)
+            plane = fitted
+
+    compute.for_each(work, range(data.shape[0]))
+    return out
+
+
+def _flat(view: Array) -> tuple[Array, tuple[int, ...]]:
+    """The memory from the first element of a view on, 1-D, and the view's steps in it."""
+    strides = tuple(step // view.itemsize for step in view.strides)
+    length = 1 + sum((n - 1) * step for n, step in zip(view.shape, strides, strict=True))
+    return np.lib.stride_tricks.as_strided(view, (length,), (view.itemsize,)), strides
