@@ -8,15 +8,20 @@ faces. On Cartesian, cylindrical and spherical grids every conductance is a prod
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
+from fieldmover import compute
 from fieldmover.forms.fields import Three
 from fieldmover.grids.axes import centres_of, dual_lengths
-from fieldmover.grids.grid import Grid, at, cosine_drop, outer, sines
+from fieldmover.grids.grid import Grid, at, cosine_drop, outer, sines, volume_factors
 
 Array = NDArray[np.float64]
 Factors = tuple[Three, Three, Three]
+
+_SLAB = 1 << 14  # cells worked on at a time
 
 
 def face_factors(grid: Grid) -> Factors | None:
@@ -58,7 +63,8 @@ def face_conductances(grid: Grid) -> Three:
     """Conductances of all faces, area / dual length, unit L; 0 on collapsed faces.
 
     The dual length is the distance between the two cell centres beside the face, at a wall from the centre to
-    the wall.
+    the wall. On warped grids the area is that of the shadow which the four corners cast along the normal, half
+    the cross product of the diagonals: second order, as the dual length is.
 
     Parameters
     ----------
@@ -72,26 +78,95 @@ def face_conductances(grid: Grid) -> Three:
     factors = face_factors(grid)
     if factors is not None:
         return outer(factors[0]), outer(factors[1]), outer(factors[2])
-    centres = grid.centres()
-    result = []
-    for axis, area in enumerate(grid.face_areas()):
-        length = np.empty(area.shape)
-        length[at(axis, slice(1, -1))] = np.sqrt((np.diff(centres, axis=axis + 1) ** 2).sum(axis=0))
-        for end in (0, -1):
-            length[at(axis, end)] = _to_wall(grid, centres, axis, end)
-        if grid.periodic[axis]:
-            length[at(axis, 0)] = length[at(axis, -1)] = length[at(axis, 0)] + length[at(axis, -1)]
-        result.append(np.where(area > 0, area, 0.0) / length)
-    return result[0], result[1], result[2]
+    result = np.empty(grid.face_shape(0)), np.empty(grid.face_shape(1)), np.empty(grid.face_shape(2))
+    middles = [_dual_nodes(grid, axis) for axis in range(3)]
+
+    def work(rows: slice) -> None:
+        x, y = _positions(grid, grid.nodes, rows, 1), _positions(grid, middles, rows, 2)
+        for axis in range(3):
+            # The middles of the other two axes that are no walls.
+            inner = tuple(slice(None) if d == axis else slice(1, -1) for d in range(3))
+            step = np.diff(y[(slice(None), *inner)], axis=axis + 1)
+            faces = slice(rows.start, rows.stop + (axis == 0))
+            result[axis][faces] = _shadows(x, axis) / _lengths(step)
+
+    compute.for_each(work, _slabs(grid))
+    for axis, g in enumerate(result):
+        for end in grid.pole_ends(axis):
+            g[at(axis, end)] = 0.0
+        if grid.periodic[axis]:  # half cells on both sides, one after the other
+            g[at(axis, 0)] = g[at(axis, -1)] = 1.0 / (1.0 / g[at(axis, 0)] + 1.0 / g[at(axis, -1)])
+    return result
 
 
-def _to_wall(grid: Grid, centres: Array, axis: int, end: int) -> Array:
-    """Distance from the centres of the outermost cells to the middle of their wall faces."""
-    q = [centres_of(nodes) for nodes in grid.nodes]
-    q[axis] = grid.nodes[axis][end : end + 1] if end == 0 else grid.nodes[axis][-1:]
-    wall = np.stack(grid.map.to_cartesian(q[0][:, None, None], q[1][None, :, None], q[2][None, None, :]))
-    gap = np.take(wall, 0, axis + 1) - np.take(centres, end, axis + 1)
-    return np.asarray(np.sqrt((gap**2).sum(axis=0)))
+def near_volumes(grid: Grid, rows: slice) -> Array:
+    """Volumes of the cells in rows of axis 1: closed forms, or to second order the product of their mean edges.
+
+    Parameters
+    ----------
+    grid : Grid
+    rows : slice
+
+    Returns
+    -------
+    ndarray, shape (rows, n2, n3)
+        Unit L^3.
+    """
+    factors = volume_factors(grid)
+    if factors is not None:
+        return outer((factors[0][rows], factors[1], factors[2]))
+    x = _positions(grid, grid.nodes, rows, 1)
+    a, b, c = (_mean_edges(x, axis) for axis in range(3))
+    return np.asarray(_dot(a, _cross(b, c)))
+
+
+def _slabs(grid: Grid) -> list[slice]:
+    n1, n2, n3 = grid.shape
+    return compute.slabs(n1, _SLAB // (n2 * n3))
+
+
+def _positions(grid: Grid, q: Sequence[Array], rows: slice, beyond: int) -> Array:
+    """Cartesian positions at the products of three lists of coordinates, of axis 1 a part and `beyond` more."""
+    part = q[0][rows.start : rows.stop + beyond]
+    return np.stack(grid.map.to_cartesian(part[:, None, None], q[1][None, :, None], q[2][None, None, :]))
+
+
+def _shadows(x: Array, axis: int) -> Array:
+    """Areas of the faces normal to an axis as their corners give them."""
+    a, b = (d for d in range(3) if d != axis)
+
+    def corner(high_a: bool, high_b: bool) -> Array:
+        return x[(slice(None), *_side(a, high_a))][(slice(None), *_side(b, high_b))]
+
+    rise, fall = corner(True, True) - corner(False, False), corner(True, False) - corner(False, True)
+    return np.asarray(0.5 * _lengths(_cross(rise, fall)))
+
+
+def _mean_edges(x: Array, axis: int) -> Array:
+    """Mean of the four edges of each cell along an axis."""
+    edges = np.diff(x, axis=axis + 1)
+    for d in range(3):
+        if d != axis:
+            edges = 0.5 * (edges[(slice(None), *_side(d, True))] + edges[(slice(None), *_side(d, False))])
+    return edges
+
+
+def _side(axis: int, high: bool) -> tuple[int | slice, ...]:
+    return at(axis, slice(1, None) if high else slice(None, -1))
+
+
+def _cross(a: Array, b: Array) -> Array:
+    (x, y, z), (u, v, w) = a, b
+    return np.stack((y * w - z * v, z * u - x * w, x * v - y * u))
+
+
+def _dot(a: Array, b: Array) -> Array:
+    (x, y, z), (u, v, w) = a, b
+    return np.asarray(x * u + y * v + z * w)
+
+
+def _lengths(a: Array) -> Array:
+    return np.asarray(np.sqrt(_dot(a, a)))
 
 
 def edge_factors(grid: Grid) -> Factors | None:

@@ -91,10 +91,10 @@ def placed(grid: Grid, origin: ArrayLike = (0.0, 0.0, 0.0), turn: ArrayLike | No
             f"turn: its columns differ from a right-handed orthonormal triple by {gap:.3g} (determinant "
             f"{np.linalg.det(matrix):.3g}), expected a rotation"
         )
-    base = grid.map
-    if isinstance(base, PlacedMap):
-        base, shift, matrix = base.base, matrix @ base.origin + shift, matrix @ base.turn
-    return replace(grid, map=PlacedMap(base, shift, matrix))
+    if isinstance(grid.map, PlacedMap):
+        inner = grid.map
+        return replace(grid, map=PlacedMap(inner.base, matrix @ inner.origin + shift, matrix @ inner.turn))
+    return replace(grid, map=PlacedMap(grid.map, shift, matrix))
 
 
 def unplaced(grid: Grid) -> Grid:

@@ -78,11 +78,13 @@ class PositionSpline:
                 part = fit(part, splines[axis].values, axis, opposite)
             parts.append(part)
         self.coefficients = np.stack(parts, axis=-1)
-        pieces = [s.value_pieces.transpose(0, 2, 1) for s in splines]
+        once_more = [np.append(np.arange(q.size - 1), q.size - 2) for q in nodes]  # as many entries as nodes
+        pieces = [s.value_pieces.transpose(0, 2, 1)[cells] for s, cells in zip(splines, once_more, strict=True)]
+        first = [s.value_first[cells] for s, cells in zip(splines, once_more, strict=True)]
         self.table = (
             np.concatenate(nodes),
-            np.concatenate([part[i] for part in pieces for i in (slice(None), slice(-1, None))]),
-            np.concatenate([s.value_first[i] for s in splines for i in (slice(None), slice(-1, None))]).astype(np.uint64),
+            np.concatenate(pieces),
+            np.concatenate(first).astype(np.uint64),
             np.cumsum([0, *(q.size for q in nodes)]),
         )
 
@@ -121,9 +123,7 @@ class PositionSpline:
         out = np.empty((3, rows, *(c.size for c in q)))
         (w1, f1), second, third = weights
         compute.for_each(
-            lambda part: _on_lattice(
-                w1[part], f1[part], *second, *third, self.coefficients, rows, out[:, :, part]
-            ),
+            lambda part: _on_lattice(w1[part], f1[part], *second, *third, self.coefficients, rows, out[:, :, part]),
             compute.slabs(q[0].size, _PLANES),
         )
         return out
@@ -176,9 +176,9 @@ def position(coefficients, strides, i, j, k, b, work, value, tangents):
         o5 = o4 + strides[0]
         w, d = b[1, 0, m], b[1, 1, m]
         for n in range(_ROW):
-            e = np.uint64(n)
-            c0, c1, c2 = coefficients[o0 + e], coefficients[o1 + e], coefficients[o2 + e]
-            c3, c4, c5 = coefficients[o3 + e], coefficients[o4 + e], coefficients[o5 + e]
+            shift = np.uint64(n)
+            c0, c1, c2 = coefficients[o0 + shift], coefficients[o1 + shift], coefficients[o2 + shift]
+            c3, c4, c5 = coefficients[o3 + shift], coefficients[o4 + shift], coefficients[o5 + shift]
             t = w0 * c0 + w1 * c1 + w2 * c2 + w3 * c3 + w4 * c4 + w5 * c5
             u = d0 * c0 + d1 * c1 + d2 * c2 + d3 * c3 + d4 * c4 + d5 * c5
             work[0, n] += w * t

@@ -10,10 +10,10 @@ from numpy.typing import ArrayLike, NDArray
 from fieldmover import compute
 from fieldmover.errors import GridError
 from fieldmover.grids.axes import Poles
-from fieldmover.grids.axis_splines import axis_spline, fit, opposite_lines, unfolded
+from fieldmover.grids.axis_splines import axis_spline, fit, unfolded
 from fieldmover.grids.grid import Grid, at, checked_ends
 from fieldmover.grids.maps import Triple
-from fieldmover.grids.position_spline import PositionSpline, Rings
+from fieldmover.grids.position_spline import PositionSpline
 
 Array = NDArray[np.float64]
 Seams = tuple[bool, bool, bool]
@@ -120,7 +120,8 @@ def nodes_from_centres(
     Parameters
     ----------
     x, y, z : array_like, shape (n1, n2, n3)
-        Cartesian positions of the centres: the middle of each cell in grid coordinates.
+        Cartesian positions of the centres, half-way between nodes along lines on which the positions are smooth
+        functions of the index. (In logarithmic steps of r that is the geometric mean, not the arithmetic one.)
     periodic, poles
         As `tabulated_grid` takes them. No centre is repeated.
 
@@ -248,7 +249,7 @@ def _collapse(table: Array, axis: int, end: int, ring: int) -> None:
 
 def _refuse_repeats(table: Array, rings: list[int | None], ends: Ends, size: float) -> None:
     for axis in range(3):
-        length = _apart(table[(slice(None), *at(axis, slice(1, None)))], table[(slice(None), *at(axis, slice(None, -1)))])
+        length = np.sqrt((np.diff(table, axis=axis + 1) ** 2).sum(axis=0))
         for pole_axis, ring in enumerate(rings):
             if ring == axis:
                 for end in _pole_indices(ends[pole_axis]):
@@ -288,8 +289,7 @@ def _joins(table: Array, axis: int, ring: int, pole: Poles, closed: bool) -> boo
     for end in _pole_indices(pole):
         layers = [_layer(table, axis, i if end == 0 else -1 - i) for i in range(min(5, table.shape[1 + axis]))]
         weights = _one_sided(len(layers))
-        slope = np.moveaxis(sum(w * layer for w, layer in zip(weights, layers, strict=True)), 1 + ring - (axis < ring), 1)
-        slope = slope[:, :-1]
+        slope = np.moveaxis(np.tensordot(weights, np.stack(layers), axes=1), 1 + ring - (axis < ring), 1)[:, :-1]
         gap = slope + np.roll(slope, n // 2, axis=1)
         if np.abs(gap).max() > _OPPOSITE * np.abs(slope).max():
             return False
@@ -308,7 +308,7 @@ def _ring_of_centres(table: Array, axis: int, pole: Poles, seams: Seams) -> int 
         return None
     others = [d for d in range(3) if d != axis and table.shape[1 + d] > 1]
     if not others:
-        raise GridError(f"axis {axis + 1} is said to have a pole, but no other axis has more than one cell for its ring")
+        raise GridError(f"axis {axis + 1} is said to have a pole, but no other has more than one cell for its ring")
     closed = [d for d in others if seams[d]]
     if len(closed) == 1:
         return closed[0]

@@ -1,8 +1,8 @@
 """Inverse of a map without closed form: Newton's method on the spline of its node positions.
 
-Points come along lines, so each starts from the one before: a chord step with its tangents, corrected by what the last
-such step missed. Two evaluations of the spline then mostly do: Newton's error is the square of its step, so a step
-below 1e-6 of a cell is the last. Beside a pole the step is taken in the plane of the ring, where the map is smooth
+Points come along lines, so each starts where the polynomial through the six before it leads, or, where a line begins, a
+chord step away from its neighbour. Newton's error is the square of its step, so a step below 2e-6 of a cell is the last,
+and one evaluation of the spline a point is the rule. Beside a pole the step is taken in the plane of the ring, where the map is smooth
 though its coordinates are not. Points that Newton does not find from their neighbour start again from the
 nearest of some thousand places in the grid (a k-d tree, Bentley 1975, Multidimensional binary search trees used for
 associative searching), with steps halved until the residual falls.
@@ -30,7 +30,9 @@ _LOST, _FOUND, _OUTSIDE = 0, 1, 2
 _BLOCKS = 16  # along each axis, each with a place to start from
 _CANDIDATES = 6  # places tried for a point
 _STEPS = 40
-_LAST_STEP, _LONGEST_STEP = 1e-6, 16.0  # in cells
+_LAST_STEP, _LONGEST_STEP = 2e-6, 16.0  # in cells
+_TRAIL = 6  # points that are extrapolated from
+_ASTRAY = 0.3  # of a cell: largest difference between that and the chord step
 _POLAR = 4.0  # within so many cells of a pole steps are taken in the plane of the ring
 _BLOCK = 64  # points whose tangents are done together
 _ROUND_OFF = 1e-15  # of the size of the grid: no residual is expected below it
@@ -162,7 +164,8 @@ def _newton(
     cells, b, work = offsets[:3].copy(), np.empty((3, 2, 6)), np.empty((3, 18))
     value, jacobian, step, old = np.empty(3), np.empty((3, 3)), np.empty(3), np.empty(3)
     g, known, inverse = np.empty(3), np.empty(3), np.empty((3, 3))
-    guess, missed, here = np.empty(3), np.zeros(3), np.empty(3)
+    trail, here, width = np.empty((_TRAIL, 3)), np.empty(3), np.empty(3)
+    length = 0  # how many points of the trail there are
     line_g, line_known, line_inverse = np.empty(3), np.empty(3), np.empty((3, 3))
     inverses = np.empty((3, 3, _BLOCK))
     linked, begins, before = False, True, 0.0
@@ -181,14 +184,16 @@ def _newton(
                 inverse[:] = line_inverse
             _multiply(inverse, here, known, step)
             _advance(g, step, 1.0, frame)
-            _copy(g, guess)
-            if not begins and abs(along - before) < 0.1 * before:
+            if begins or abs(along - before) > 0.1 * before:
+                length = 0
+            elif length > 2:
                 for d in range(3):
-                    g[d] += missed[d]
+                    width[d] = nodes[cells[d] + 1] - nodes[cells[d]]
+                _extrapolate(trail, length, g, width, frame)
         else:
             for d in range(3):
                 g[d] = start[d, 0] if chained else start[d, n]
-            _copy(g, guess)
+            length = 0
         before = along
         found = _solve(
             g,
@@ -213,10 +218,7 @@ def _newton(
         )
         state[n] = found
         linked = chained and found != _LOST
-        for d in range(3):
-            missed[d] = g[d] - guess[d] if found == _FOUND else 0.0
-            if frame[d, 4] > 0.0:
-                missed[d] -= frame[d, 4] * np.round(missed[d] / frame[d, 4])
+        length = _remember(trail, length, g, frame) if found == _FOUND else 0
         if begins and linked:
             _copy(g, line_g)
             _copy(known, line_known)
@@ -241,6 +243,42 @@ def _components(inverses, tangents, begin, count, dq):
                     + inverses[d, 1, n] * tangents[1, t, begin + n]
                     + inverses[d, 2, n] * tangents[2, t, begin + n]
                 )
+
+
+@compute.kernel
+def _remember(trail, length, g, frame):
+    """Put g in front of the trail, on the same turn round a seam; a trail ends beside a pole. Returns its length."""
+    for d in range(3):
+        for end in range(2):
+            if frame[d, 5] >= 0.0 and frame[d, 6 + end] > 0.0:
+                if abs(g[d] - frame[d, end]) < _POLAR * frame[d, 2 + end]:
+                    return 0
+    for d in range(3):
+        for m in range(_TRAIL - 1, 0, -1):
+            trail[m, d] = trail[m - 1, d]
+        trail[0, d] = g[d]
+        if length > 0 and frame[d, 4] > 0.0:
+            trail[0, d] += frame[d, 4] * np.round((trail[1, d] - g[d]) / frame[d, 4])
+    return min(length + 1, _TRAIL)
+
+
+@compute.kernel
+def _extrapolate(trail, length, g, width, frame):
+    """The next place of a trail into g, unless it is far from there."""
+    far = False
+    for d in range(3):
+        factor, place = 1.0, 0.0
+        for m in range(length):  # signed binomial coefficients of length
+            factor *= (length - m) / (m + 1.0)
+            place += factor * trail[m, d]
+            factor = -factor
+        shift = place - g[d]
+        if frame[d, 4] > 0.0:
+            shift -= frame[d, 4] * np.round(shift / frame[d, 4])
+        far = far or abs(shift) > _ASTRAY * width[d]
+        width[d] = g[d] + shift
+    if not far:
+        _copy(width, g)
 
 
 @compute.kernel

@@ -1,7 +1,7 @@
 """The gauge function that makes a potential smooth: d0^T W (a - d0 g) = 0 on the nodes.
 
-Direct on Cartesian, cylindrical and spherical grids. Elsewhere conjugate gradients, preconditioned by the nearest
-separable operator; where they stop only decides how close to smoothest the gauge is.
+Solved directly, by separation of variables. Grids without closed form take the weights W of a plain one with the same
+poles and seams: what is smooth there is smooth here, since the map from one to the other is.
 """
 
 from __future__ import annotations
@@ -13,17 +13,16 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.forms.fields import Three
-from fieldmover.forms.measures import edge_factors, edge_weights
-from fieldmover.grids.grid import Grid, at, outer
-from fieldmover.projection.conjugate import conjugate_gradients
-from fieldmover.projection.nearest import nearest_factors
+from fieldmover.forms.measures import Factors, edge_factors
+from fieldmover.grids.grid import Grid, at, cartesian_grid, outer, spherical_grid
 from fieldmover.projection.separable import for_nodes
 
 Array = NDArray[np.float64]
 Weight = Callable[[int, slice], Array]
 
 _ROWS = 8  # planes per task
-_TOLERANCE = 1e-8
+_SAMPLES = 9  # lines per axis that tell how long another is
+_WIDEST = 1.8  # of the mean radius: largest difference between the radii of the plain sphere
 
 
 def smoothing_gauge(grid: Grid, edges: Three) -> Array:
@@ -42,32 +41,48 @@ def smoothing_gauge(grid: Grid, edges: Three) -> Array:
     """
     unique = tuple(slice(None, -1) if seam else slice(None) for seam in grid.periodic)
     g = np.empty(grid.node_shape())
-    factors = edge_factors(grid)
-    if factors is not None:
-        rhs = _divergence(grid, edges, lambda axis, rows: _part(factors[axis], rows))
-        g[unique] = for_nodes(factors, grid.periodic, grid.poles).solve(rhs)
-    else:
-        weights = edge_weights(grid)
-
-        def weight(axis: int, rows: slice) -> Array:
-            return weights[axis][rows]
-
-        rhs = _divergence(grid, edges, weight)
-        _gather_poles(grid, rhs)
-        direct = for_nodes(nearest_factors(weights), grid.periodic, grid.poles)
-        full = np.empty(grid.node_shape())
-
-        def apply(s: Array, out: Array) -> float:
-            full[unique] = s
-            _close(grid, full)
-            slopes = tuple(np.diff(full, axis=axis) for axis in range(3))
-            out[...] = _divergence(grid, (slopes[0], slopes[1], slopes[2]), weight)
-            _gather_poles(grid, out)
-            return float(np.vdot(s, out))
-
-        g[unique] = conjugate_gradients(apply, direct.solve, rhs, _TOLERANCE).p
+    factors = edge_factors(grid) or _plain_factors(grid)
+    rhs = _divergence(grid, edges, lambda axis, rows: _part(factors[axis], rows))
+    g[unique] = for_nodes(factors, grid.periodic, grid.poles).solve(rhs)
     _close(grid, g)
     return g
+
+
+def _plain_factors(grid: Grid) -> Factors:
+    """Edge weights of a box, or with poles of a shell, of about the size of the grid.
+
+    Its coordinates are smooth functions of the grid's: mean distances, or angles with poles in proportion.
+    """
+    away = [_mean_distances(grid, axis) for axis in range(3)]
+    order = (0, 1, 2)
+    plain = cartesian_grid(away[0], away[1], away[2], grid.periodic)
+    for axis, ring in enumerate(grid.ring_axis):
+        if ring is None:
+            continue
+        order = (3 - axis - ring, axis, ring)
+        first, last = {"low": (0.0, 0.5), "high": (0.5, 1.0)}.get(grid.poles[axis] or "", (0.0, 1.0))
+        part, round_it = ((q - q[0]) / np.ptp(q) for q in (grid.nodes[axis], grid.nodes[ring]))
+        radius = away[axis][-1] / (np.pi * (last - first))
+        depth = away[order[0]] * min(1.0, _WIDEST * radius / away[order[0]][-1])
+        turn = 2.0 * np.pi if grid.periodic[ring] else min(6.0, 2.0 * away[ring][-1] / radius)
+        polar = np.pi * (first + (last - first) * part)
+        plain = spherical_grid(radius + depth - 0.5 * depth[-1], polar, turn * round_it)
+    weights = edge_factors(plain)
+    assert weights is not None  # closed forms
+    place = np.argsort(order)
+    one, two, three = ((w[place[0]], w[place[1]], w[place[2]]) for w in (weights[place[d]] for d in range(3)))
+    return one, two, three
+
+
+def _mean_distances(grid: Grid, axis: int) -> Array:
+    """Distance of each node of an axis from the first along lines of that axis, mean over some of them."""
+    q = [
+        nodes if d == axis else nodes[np.unique(np.linspace(0, nodes.size - 1, _SAMPLES).round().astype(int))]
+        for d, nodes in enumerate(grid.nodes)
+    ]
+    x = np.stack(grid.map.to_cartesian(q[0][:, None, None], q[1][None, :, None], q[2][None, None, :]))
+    steps = np.sqrt((np.diff(x, axis=axis + 1) ** 2).sum(axis=0)).mean(axis=tuple(d for d in range(3) if d != axis))
+    return np.concatenate([[0.0], np.cumsum(steps)])
 
 
 def _part(factors: Three, rows: slice) -> Array:
@@ -83,13 +98,6 @@ def _close(grid: Grid, g: Array) -> None:
     for axis, end, ring in _poles(grid):
         on_pole = np.moveaxis(g[at(axis, end)], ring - (axis < ring), 0)
         on_pole[:] = on_pole[0].copy()
-
-
-def _gather_poles(grid: Grid, values: Array) -> None:
-    """Give the nodes of each pole equal shares of their sum."""
-    for axis, end, ring in _poles(grid):
-        on_pole = np.moveaxis(values[at(axis, end)], ring - (axis < ring), 0)
-        on_pole[:] = on_pole.mean(axis=0)
 
 
 def _poles(grid: Grid) -> list[tuple[int, int, int]]:

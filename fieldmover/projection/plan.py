@@ -61,6 +61,11 @@ class Plan:
     free: Masks | None
     excised: Mask | None
 
+    @property
+    def counts(self) -> tuple[int, int]:
+        """Numbers of frozen faces and excised cells."""
+        return sum(int(m.sum()) for m in self.frozen or ()), 0 if self.excised is None else int(self.excised.sum())
+
 
 def make_plan(
     flux: FaceFlux,
@@ -95,10 +100,10 @@ def make_plan(
     scale = None if user is None else common_scale(conductances, factors)
     weakened = None
     if frozen_faces is not None:
-        whole = _sums_over_faces(conductances)
+        whole = sums_over_faces(conductances)
         for g, mask in zip(conductances, frozen_faces, strict=True):
             g[mask] = 0.0
-        weakened = weakened_cells(whole, _sums_over_faces(conductances) * active)
+        weakened = weakened_cells(whole, sums_over_faces(conductances) * active)
         is_open = _open_somewhere(is_open, conductances)
     around = hole_axis(grid)
     neutral = hole == "neutral" and around is not None and is_open[around][0]
@@ -130,7 +135,7 @@ def _open_somewhere(is_open: Walls, conductances: Three) -> Walls:
     return pairs[0], pairs[1], pairs[2]
 
 
-def _sums_over_faces(conductances: Three) -> Array:
+def sums_over_faces(conductances: Three) -> Array:
     """Sum over the six faces of every cell."""
     total = np.zeros(conductances[0][:-1].shape)
     for axis, g in enumerate(conductances):

@@ -7,10 +7,9 @@ the numerical solution of the magnetohydrodynamic equations, is the continuous f
 
 from __future__ import annotations
 
-import math
 import time
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -23,10 +22,10 @@ from fieldmover.projection.conjugate import conjugate_gradients
 from fieldmover.projection.consistency import balance_walls, check_held_cells, check_islands
 from fieldmover.projection.exact import close, lines, search
 from fieldmover.projection.nearest import Preconditioner
-from fieldmover.projection.operator import Balance, ProjectionOperator
+from fieldmover.projection.operator import ProjectionOperator
 from fieldmover.projection.plan import Hole, Plan, make_plan
-from fieldmover.projection.record import Record, compare, norms
-from fieldmover.projection.request import WallsLike, WeightsLike, checked_flux, checked_tolerance, hole_axis
+from fieldmover.projection.record import Cleaned, Record, record_of
+from fieldmover.projection.request import WallsLike, WeightsLike, checked_flux, checked_tolerance, region_masks
 
 Array = NDArray[np.float64]
 
@@ -44,6 +43,7 @@ def project(
     excised: ArrayLike | None = None,
     hole: Hole = "neutral",
     quantum: float | None = None,
+    regions: Mapping[str, ArrayLike] | None = None,
 ) -> tuple[FaceFlux, Record]:
     """Remove the divergence of a flux by the least change.
 
@@ -70,6 +70,8 @@ def project(
     quantum : float, optional
         Power of two of which the result holds multiples; by default 2^-50 of the largest flux. With it every
         divergence is exactly zero, except where frozen faces are no such multiples.
+    regions : mapping of str to bool arrays, shape (n1, n2, n3), optional
+        Cells of which the record says what share of the change is in them.
 
     Returns
     -------
@@ -100,52 +102,23 @@ def project(
     started = time.perf_counter()
     checked_tolerance(tolerance)
     checked_flux(flux)
+    inside = region_masks(flux.grid, regions)
     plan = make_plan(flux, walls, weights, frozen, excised, hole)
     done = _clean(flux, plan, tolerance, quantum)
     metric = plan.operator.conductances if plan.metric else None
-    counts = (
-        sum(int(m.sum()) for m in plan.frozen or ()),
-        0 if plan.excised is None else int(plan.excised.sum()),
-    )
+    counts = plan.counts
     del plan
-    around = hole_axis(flux.grid)
-    charges = [None if around is None else math.fsum(f[around][at(around, 0)].flat) for f in (flux.faces, done.faces)]
-    record = Record(
-        method=done.method,
-        iterations=len(done.history),
-        history=done.history,
-        stopped=done.stopped,
-        divergence_before=norms(done.before),
-        divergence_after=norms(done.after),
-        **compare(flux, done.faces, metric or face_conductances(flux.grid)),
-        charge_before=charges[0],
-        charge_after=charges[1],
-        frozen_faces=counts[0],
-        excised_cells=counts[1],
-        seconds=time.perf_counter() - started,
-    )
+    record = record_of(flux, done, metric or face_conductances(flux.grid), inside, counts, started)
     return flux if done.method == "none" else FaceFlux(flux.grid, done.faces), record
 
 
-@dataclass(frozen=True, eq=False)
-class _Cleaned:
-    """Fluxes without divergence, and how they came about."""
-
-    faces: Three
-    method: str
-    history: list[float]
-    stopped: str
-    before: Balance
-    after: Balance
-
-
-def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) -> _Cleaned:
+def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) -> Cleaned:
     operator, net = plan.operator, np.empty(flux.grid.shape)
     if plan.free is not None:
         check_held_cells(flux.grid, flux.faces, operator.active, plan.excised)
     before = operator.source(flux.faces, net)
     if before.linf <= _CLEAN and _is_neutral(operator, flux.faces):
-        return _Cleaned(flux.faces, "none", [], "divergence-free already", before, before)
+        return Cleaned(flux.faces, "none", [], "divergence-free already", before, before)
     forest = None if plan.free is None else search(operator, plan.free, plan.excised)
     excess = check_islands(flux.grid, flux.faces, operator, plan.free, forest, net)
 
@@ -167,7 +140,7 @@ def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) 
             products = (outer(plan.factors[0]), outer(plan.factors[1]), outer(plan.factors[2]))
             _direct(replace(operator, conductances=products), plan.factors, faces, net, before.largest)
     close(faces, operator, forest or lines(operator), plan.frozen, quantum)
-    return _Cleaned(faces, method, history, stopped, before, operator.source(faces, net))
+    return Cleaned(faces, method, history, stopped, before, operator.source(faces, net))
 
 
 def _is_neutral(operator: ProjectionOperator, faces: Three) -> bool:

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+import time
+from collections.abc import Mapping
 from dataclasses import asdict, dataclass
 from typing import Any
 
@@ -12,11 +13,14 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.forms.fields import FaceFlux, Three
+from fieldmover.forms.measures import near_volumes
 from fieldmover.grids.axes import centres_of
-from fieldmover.grids.grid import Grid, at, volume_factors
+from fieldmover.grids.grid import Grid, at
 from fieldmover.projection.operator import Balance
+from fieldmover.projection.request import hole_axis
 
 Array = NDArray[np.float64]
+Regions = Mapping[str, NDArray[np.bool_]]
 
 _SLAB = 1 << 15
 
@@ -32,18 +36,18 @@ class Norms:
 
 @dataclass(frozen=True)
 class Record:
-    """Figures of one call of `project`.
+    """Figures of one call of `project`, `relax` or `project_cells`.
 
     Attributes
     ----------
     method : str
-        "none" (nothing to do), "direct" or "conjugate gradients".
+        "none" (nothing to do), "direct", "conjugate gradients" or "relaxation".
     iterations : int
-        Solves of the direct solver, or iterations.
+        Solves of the direct solver, iterations, or steps.
     history : list of float
         Largest net flux left after each, relative to the largest before.
     stopped : str
-        Why: "divergence-free already", "round-off" or "tolerance reached".
+        Why: "divergence-free already", "round-off", "tolerance reached" or "steps done".
     divergence_before, divergence_after : Norms
     energy_before, energy_after, energy_removed : float
         Half the integral of B^2 (Heaviside-Lorentz), unit B^2 L^3.
@@ -57,6 +61,8 @@ class Record:
     largest_change_cell : tuple of three int
     largest_change_at : tuple of three float
         Cartesian position of its centre.
+    change_in_regions : dict of str to float
+        Share of `energy_of_change` in each region asked for.
     charge_before, charge_after : float or None
         Net flux out of the hole through a closed inner wall; None where there is no such wall.
     frozen_faces, excised_cells : int
@@ -77,6 +83,7 @@ class Record:
     rms_change: float
     largest_change_cell: tuple[int, int, int]
     largest_change_at: tuple[float, float, float]
+    change_in_regions: dict[str, float]
     charge_before: float | None
     charge_after: float | None
     frozen_faces: int
@@ -91,11 +98,48 @@ class Record:
         return found
 
 
-def norms(balance: Balance) -> Norms:
+@dataclass(frozen=True, eq=False)
+class Cleaned:
+    """Fluxes with less divergence, and how they came about."""
+
+    faces: Three
+    method: str
+    history: list[float]
+    stopped: str
+    before: Balance
+    after: Balance
+
+
+def record_of(
+    flux: FaceFlux, done: Cleaned, conductances: Three, regions: Regions, counts: tuple[int, int], started: float
+) -> Record:
+    """The record of what was done to `flux`; `compare` says what conductances and regions are.
+
+    `counts` are those of frozen faces and excised cells, `started` is a time by `time.perf_counter`.
+    """
+    around = hole_axis(flux.grid)
+    charges = [None if around is None else math.fsum(f[around][at(around, 0)].flat) for f in (flux.faces, done.faces)]
+    return Record(
+        method=done.method,
+        iterations=len(done.history),
+        history=done.history,
+        stopped=done.stopped,
+        divergence_before=_norms(done.before),
+        divergence_after=_norms(done.after),
+        **compare(flux, done.faces, conductances, regions),
+        charge_before=charges[0],
+        charge_after=charges[1],
+        frozen_faces=counts[0],
+        excised_cells=counts[1],
+        seconds=time.perf_counter() - started,
+    )
+
+
+def _norms(balance: Balance) -> Norms:
     return Norms(balance.linf, balance.l1, balance.l2)
 
 
-def compare(before: FaceFlux, after: Three, conductances: Three) -> dict[str, Any]:
+def compare(before: FaceFlux, after: Three, conductances: Three, regions: Regions) -> dict[str, Any]:
     """The figures of `Record` on energies and changes.
 
     Parameters
@@ -104,34 +148,36 @@ def compare(before: FaceFlux, after: Three, conductances: Three) -> dict[str, An
     after : tuple of three ndarrays
     conductances : tuple of three ndarrays
         Metric ones, of all faces.
+    regions : mapping of str to bool ndarray, shape (n1, n2, n3)
     """
     grid = before.grid
     n1, n2, n3 = grid.shape
     slabs = compute.slabs(n1, _SLAB // (n2 * n3))
-    volume = _volumes(grid)
 
     def energy(rows: slice) -> float:
         return float(_energies(_weights(grid, conductances, rows), _of_cells(before.faces, rows)).sum())
 
     old = math.fsum(compute.for_each(energy, slabs))
-    density = old / math.fsum(float(volume(rows).sum()) for rows in slabs)
+    density = old / math.fsum(compute.for_each(lambda rows: float(near_volumes(grid, rows).sum()), slabs))
 
-    def work(rows: slice) -> tuple[float, float, float, int]:
+    def work(rows: slice) -> tuple[float, float, float, int, list[float]]:
         weights, a, b = (
             _weights(grid, conductances, rows),
             _of_cells(before.faces, rows),
             _of_cells(after, rows),
         )
         change = _energies(weights, [y - x for x, y in zip(a, b, strict=True)])
-        size = np.maximum(_energies(weights, a), density * volume(rows))
+        size = np.maximum(_energies(weights, a), density * near_volumes(grid, rows))
         ratio = np.divide(change, size, out=np.zeros_like(size), where=size > 0)
         worst = int(np.argmax(ratio))
         new = float(_energies(weights, b).sum())
-        return new, float(change.sum()), float(ratio.flat[worst]), worst + rows.start * n2 * n3
+        within = [float(change[mask[rows]].sum()) for mask in regions.values()]
+        return new, float(change.sum()), float(ratio.flat[worst]), worst + rows.start * n2 * n3, within
 
     parts = compute.for_each(work, slabs)
-    new, change = (math.fsum(part[i] for part in parts) for i in (0, 1))
-    largest, worst = max((part[2:] for part in parts), key=lambda found: found[0])
+    new, change = math.fsum(part[0] for part in parts), math.fsum(part[1] for part in parts)
+    largest, worst = max((part[2:4] for part in parts), key=lambda found: found[0])
+    within = [math.fsum(sums) for sums in zip(*(part[4] for part in parts), strict=True)]
     i, j, k = np.unravel_index(worst, grid.shape)
     cell = (int(i), int(j), int(k))
     return {
@@ -143,23 +189,10 @@ def compare(before: FaceFlux, after: Three, conductances: Three) -> dict[str, An
         "rms_change": math.sqrt(change / old) if old > 0 else 0.0,
         "largest_change_cell": cell,
         "largest_change_at": _centre(grid, cell),
+        "change_in_regions": {
+            name: part / change if change > 0 else 0.0 for name, part in zip(regions, within, strict=True)
+        },
     }
-
-
-def _volumes(grid: Grid) -> Callable[[slice], Array]:
-    """Volumes of the cells in rows of axis 1: closed forms, or the Jacobian at the cell centres."""
-    factors = volume_factors(grid)
-    if factors is not None:
-        v1, v2, v3 = factors
-        return lambda rows: v1[rows, None, None] * v2[:, None] * v3
-    (q1, q2, q3), (d1, d2, d3) = map(centres_of, grid.nodes), map(np.diff, grid.nodes)
-
-    def at_centres(rows: slice) -> Array:
-        j = grid.map.jacobian(q1[rows, None, None], q2[:, None], q3)
-        steps = d1[rows, None, None] * d2[:, None] * d3
-        return np.asarray(np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0)) * steps)
-
-    return at_centres
 
 
 def _of_cells(faces: Three, rows: slice) -> list[Array]:

@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, Three
+from fieldmover.forms.measures import near_volumes
 from fieldmover.grids.grid import Grid, at
 from fieldmover.projection.operator import Walls
 
@@ -123,11 +124,27 @@ def excised_mask(grid: Grid, excised: ArrayLike | None) -> Mask | None:
     """
     if excised is None:
         return None
-    mask = np.asarray(excised)
-    if mask.shape != grid.shape or mask.dtype != np.bool_:
-        raise FieldError(f"excised: {mask.dtype} array of shape {mask.shape}, expected bool of shape {grid.shape}")
+    mask = _cell_mask(grid, excised, "excised")
     if mask.all():
         raise FieldError("excised: every cell is, expected some that are looked at")
+    return mask
+
+
+def region_masks(grid: Grid, regions: Mapping[str, ArrayLike] | None) -> dict[str, Mask]:
+    """Masks of cells, by name.
+
+    Raises
+    ------
+    FieldError
+        If one is not a mask of the shape of the grid.
+    """
+    return {name: _cell_mask(grid, mask, f"region {name!r}") for name, mask in (regions or {}).items()}
+
+
+def _cell_mask(grid: Grid, values: ArrayLike, what: str) -> Mask:
+    mask = np.asarray(values)
+    if mask.shape != grid.shape or mask.dtype != np.bool_:
+        raise FieldError(f"{what}: {mask.dtype} array of shape {mask.shape}, expected bool of shape {grid.shape}")
     return mask
 
 
@@ -183,7 +200,7 @@ def _strength_at_faces(flux: FaceFlux, conductances: Three) -> list[Array]:
             part[at(axis, 0)] *= 2.0
             part[at(axis, -1)] *= 2.0
         square += 0.5 * (part[at(axis, slice(None, -1))] + part[at(axis, slice(1, None))])
-    strength = np.sqrt(square / grid.cell_volumes())
+    strength = np.sqrt(square / near_volumes(grid, slice(0, grid.shape[0])))
     at_faces = []
     for axis in range(3):
         padded = np.concatenate(

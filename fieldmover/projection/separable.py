@@ -19,7 +19,6 @@ is exactly 0.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from itertools import groupby
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,9 +32,9 @@ Step = Callable[[slice], object]
 
 _SAME = 1e-12  # relative scatter allowed in the ratio of two mass vectors that ought to be proportional
 _COLLAPSED = 1e30  # makes amplitudes that a pole does not have vanish there
-_COLUMNS = 4096  # columns transformed at a time along the first axis
+_COLUMNS = 256  # columns transformed at a time along the first axis
+_ASIDE = 8  # numbers of a cache line
 _IN_CACHE = 1 << 15  # cells in work at a time: they stay in cache from the first step to the last
-_FOR_PRODUCT = 1 << 20  # cells in work at a time where a step is a matrix product
 
 
 class SeparableSolver:
@@ -132,10 +131,9 @@ class SeparableSolver:
                 self._eliminate(plane[:, None, :], outer.values[i : i + 1], inner.values, 0, e)
                 _replace(x[i], plane if t == 1 else plane.T)
 
-        _along_first(x, outer.forward, outer.fast)
-        before, after = _within(x, inner.forward, e), _within(x, inner.backward, e)
-        _by_planes(x, [(inner.fast, before), (True, eliminate), (inner.fast, after)])
-        _along_first(x, outer.backward, outer.fast)
+        _along_first(x, outer.forward)
+        _by_planes(x, [_within(x, inner.forward, e), eliminate, _within(x, inner.backward, e)])
+        _along_first(x, outer.backward)
 
     def _through_planes(self, x: Array) -> None:
         """Amplitudes along axes 2 and 3, plane by plane; then tridiagonal systems along axis 1."""
@@ -146,9 +144,9 @@ class SeparableSolver:
             self._eliminate(part, two.values[columns], three.values, 1, 2)
             x[:, columns] = part
 
-        _by_planes(x, [(basis.fast, _within(x, basis.forward, e)) for e, basis in self._bases.items()])
+        _by_planes(x, [_within(x, basis.forward, e) for e, basis in self._bases.items()])
         compute.for_each(eliminate, compute.slabs(x.shape[1], 4))
-        _by_planes(x, [(basis.fast, _within(x, basis.backward, e)) for e, basis in self._bases.items()])
+        _by_planes(x, [_within(x, basis.backward, e) for e, basis in self._bases.items()])
 
     def _eliminate(self, x: Array, outer: Array, inner: Array, a: int, b: int) -> None:
         """Solve along the first axis of x; the others hold amplitudes of eigenvalues `outer` and `inner`."""
@@ -249,40 +247,40 @@ def _same(one: Array, other: Array) -> bool:
     return bool(np.allclose(one, other * _ratio(one, other), rtol=_SAME, atol=0))
 
 
-def _along_first(x: Array, transform: Transform, fast: bool) -> None:
+def _along_first(x: Array, transform: Transform) -> None:
     """Transform along the first axis in place, some columns at a time."""
     columns = x.reshape(x.shape[0], -1)
 
     def work(part: slice) -> None:
-        _replace(columns[:, part], transform(columns[:, part], 0))
+        _apart(columns[:, part], transform, 0)
 
-    _spread(work, compute.slabs(columns.shape[1], _COLUMNS), fast)
+    compute.for_each(work, compute.slabs(columns.shape[1], _COLUMNS))
 
 
 def _within(x: Array, transform: Transform, axis: int) -> Step:
+    if axis == 1:
+        return lambda planes: _apart(x[planes], transform, axis)
     return lambda planes: _replace(x[planes], transform(x[planes], axis))
 
 
-def _by_planes(x: Array, steps: list[tuple[bool, Step]]) -> None:
-    """Do all steps on some planes, then on the next; steps marked True share the planes among the threads."""
-    for fast, group in groupby(steps, key=lambda step: step[0]):
-        works = [work for _, work in group]
+def _apart(x: Array, transform: Transform, axis: int) -> None:
+    """Transform along an axis whose points lie far apart, on a copy with distances that are no powers of two.
 
-        def work(planes: slice, works: list[Step] = works) -> None:
-            for step in works:
-                step(planes)
-
-        cells = _IN_CACHE if fast else _FOR_PRODUCT
-        _spread(work, compute.slabs(x.shape[0], cells // (x.shape[1] * x.shape[2])), fast)
+    Those would put all points of a line into the same few places of the cache.
+    """
+    copy = np.empty((*x.shape[:-1], x.shape[-1] + _ASIDE))[..., :-_ASIDE]
+    copy[...] = x
+    x[...] = transform(copy, axis)
 
 
-def _spread(work: Step, parts: list[slice], fast: bool) -> None:
-    """Fast transforms run one to a thread; a matrix product wants all threads for itself."""
-    if fast:
-        compute.for_each(work, parts)
-    else:
-        for part in parts:
-            work(part)
+def _by_planes(x: Array, steps: list[Step]) -> None:
+    """Do all steps on some planes, then on the next."""
+
+    def work(planes: slice) -> None:
+        for step in steps:
+            step(planes)
+
+    compute.for_each(work, compute.slabs(x.shape[0], _IN_CACHE // (x.shape[1] * x.shape[2])))
 
 
 def _replace(place: Array, value: Array) -> Array:
