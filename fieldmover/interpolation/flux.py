@@ -22,13 +22,14 @@ from fieldmover.grids.grid import Grid, at
 from fieldmover.interpolation.aligned import move_aligned, same_coordinates
 from fieldmover.interpolation.coverage import Outside, fill, known_faces
 from fieldmover.interpolation.evaluate import PotentialSpline
+from fieldmover.interpolation.limited import move_limited
 from fieldmover.interpolation.lines import integrate_lines
 from fieldmover.interpolation.locate import Locator, inside
 from fieldmover.projection.potential import potential
 
 Array = NDArray[np.float64]
 Known = tuple[NDArray[np.bool_], NDArray[np.bool_], NDArray[np.bool_]]
-Order = Literal[1, 3, 5]
+Order = Literal[1, 3, 5, "limited"]
 
 _BRICK = (16, 16, 32)  # nodes located together: their part of the source's coefficients stays in cache
 _EDGES = 1 << 12  # edges that are not on the lattice of nodes, at a time
@@ -44,8 +45,9 @@ def move_flux(flux: FaceFlux, target: Grid, order: Order = 3, outside: Outside =
         Divergence-free to round-off; `project` makes it so.
     target : Grid
         In the same Cartesian frame and unit of length.
-    order : {1, 3, 5}
-        Degree of the spline. 3 for smooth fields, 5 where they are very well resolved, 1 never overshoots.
+    order : {1, 3, 5, "limited"}
+        Degree of the spline. 3 for smooth fields, 5 where they are very well resolved; 1 never overshoots, but smears;
+        "limited" is 3 where the field is resolved and between 1 and 3 at sheets and shocks (see `limited`).
     outside : {"least energy", "zero", "refuse"}
         What the target's faces carry where the source does not reach: the divergence-free field of least energy that
         matches the known faces; nothing, but for a layer of two cells that closes the field lines; or an error.
@@ -78,7 +80,7 @@ def move_flux(flux: FaceFlux, target: Grid, order: Order = 3, outside: Outside =
     (True, 0.0)
     """
     if order not in get_args(Order):
-        raise FieldError(f"order: {order!r}, expected one of {', '.join(map(str, get_args(Order)))}")
+        raise FieldError(f"order: {order!r}, expected one of {', '.join(map(repr, get_args(Order)))}")
     if outside not in get_args(Outside):
         raise FieldError(f"outside: {outside!r}, expected one of {', '.join(map(repr, get_args(Outside)))}")
     edges, known = move_potential(potential(flux), target, order)
@@ -97,7 +99,7 @@ def move_potential(pot: EdgePotential, target: Grid, order: Order = 3) -> tuple[
     pot : EdgePotential
         In a smooth gauge: a rough one costs accuracy near poles.
     target : Grid
-    order : {1, 3, 5}
+    order : {1, 3, 5, "limited"}
 
     Returns
     -------
@@ -106,6 +108,8 @@ def move_potential(pot: EdgePotential, target: Grid, order: Order = 3) -> tuple[
     known : tuple of three bool ndarrays
         Edges that lie wholly in the source.
     """
+    if order == "limited":
+        return move_limited(pot, target, move_potential)
     move = move_aligned if same_coordinates(pot.grid, target) else _move_across
     edges, known = move(pot, target, order)
     close_edges(target, edges)
@@ -117,7 +121,7 @@ def move_potential(pot: EdgePotential, target: Grid, order: Order = 3) -> tuple[
     return edges, known
 
 
-def _move_across(pot: EdgePotential, target: Grid, order: Order) -> tuple[Three, Known]:
+def _move_across(pot: EdgePotential, target: Grid, order: int) -> tuple[Three, Known]:
     """Edges of a grid in other coordinates: from nodes where that is good enough, else from points of their own."""
     spline, locator = PotentialSpline(pot, order), Locator(pot.grid)
     edges = [np.full(target.edge_shape(d), np.nan) for d in range(3)]
@@ -145,7 +149,7 @@ def _from_nodes(spline: PotentialSpline, locator: Locator, target: Grid, edges: 
     longest = [np.maximum(np.diff(q, append=q[-1]), np.diff(q, prepend=q[0])) for q in target.nodes]
     allowed = _cells_allowed(spline.grid)
 
-    def work(brick: tuple[slice, slice, slice]) -> None:
+    def work(brick: tuple[slice, ...]) -> None:
         first, second, third = (q[part] for q, part in zip(target.nodes, brick, strict=True))
         nodes = (first[:, None, None], second[None, :, None], third[None, None, :])
         x = np.stack(target.map.to_cartesian(*nodes))
@@ -160,7 +164,14 @@ def _from_nodes(spline: PotentialSpline, locator: Locator, target: Grid, edges: 
         steps = (step[part] for step, part in zip(longest, brick, strict=True))
         corner = (part.start for part in brick)
         _rates(
-            q.reshape(3, *shape), dq.reshape(3, 3, *shape), covectors, *steps, *spline.grid.nodes, allowed, *corner, *rates
+            q.reshape(3, *shape),
+            dq.reshape(3, 3, *shape),
+            covectors,
+            *steps,
+            *spline.grid.nodes,
+            allowed,
+            *corner,
+            *rates,
         )
 
     bricks = product(*(compute.slabs(n, size) for n, size in zip(target.node_shape(), _BRICK, strict=True)))
