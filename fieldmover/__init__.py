@@ -30,14 +30,31 @@ if TYPE_CHECKING:
         divergence,
         flux_from_function,
         potential_from_function,
+        unfold,
     )
-    from fieldmover.grids import Grid, cartesian_grid, cylindrical_grid, spherical_grid, warped_grid
+    from fieldmover.grids import (
+        Grid,
+        cartesian_grid,
+        cylindrical_grid,
+        placed,
+        spherical_grid,
+        tabulated_grid,
+        warped_grid,
+    )
     from fieldmover.interpolation import cells_from_flux, flux_from_cells, move_content, move_flux
     from fieldmover.projection.potential import potential
     from fieldmover.projection.project import project
 
 _HOME = {
-    "grids": ("Grid", "cartesian_grid", "cylindrical_grid", "spherical_grid", "warped_grid"),
+    "grids": (
+        "Grid",
+        "cartesian_grid",
+        "cylindrical_grid",
+        "placed",
+        "spherical_grid",
+        "tabulated_grid",
+        "warped_grid",
+    ),
     "forms": (
         "CellContent",
         "EdgePotential",
@@ -46,6 +63,7 @@ _HOME = {
         "divergence",
         "flux_from_function",
         "potential_from_function",
+        "unfold",
     ),
     "interpolation": ("cells_from_flux", "flux_from_cells", "move_content", "move_flux"),
     "projection": ("potential", "project"),
@@ -69,10 +87,13 @@ __all__ = [
     "flux_from_function",
     "move_content",
     "move_flux",
+    "placed",
     "potential",
     "potential_from_function",
     "project",
     "spherical_grid",
+    "tabulated_grid",
+    "unfold",
     "warped_grid",
 ]
 

@@ -107,7 +107,9 @@ def test_a_hand_over(place, capsys):
         "ring.h5",
         "ring.toml",
     ]
-    assert sorted(os.listdir(place.report)) == ["report.html", "report.json", "report.xml", "summary.md"]
+    files = os.listdir(place.report)
+    assert sorted(f for f in files if not f.endswith(".png")) == ["report.html", "report.json", "report.xml", "summary.md"]
+    assert {"b-source-y-0.png", "b-target-as-stored-y-0.png", "divergence-source-y-0.png"} <= set(files)
 
     report = place.figures()
     assert report["verdict"] == "within limits"
@@ -539,3 +541,49 @@ def test_stopped_by_a_signal(place, number, status):
         assert time.monotonic() - started < 8
         assert "Traceback" not in program.stderr.read()
     assert sorted(os.listdir(place.folder)) == ["ring.h5", "ring.toml"]
+
+
+# -- help for the shell, and quiet --------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("shell", ["bash", "zsh", "fish"])
+def test_completion_of_the_shell(shell):
+    def run(instruction: str, **more: str) -> str:
+        variables = {**os.environ, "_FIELDMOVER_COMPLETE": f"{shell}_{instruction}", **more}
+        command = [sys.executable, "-m", "fieldmover"]
+        return subprocess.run(command, env=variables, capture_output=True, text=True, check=True).stdout
+
+    assert "_FIELDMOVER_COMPLETE" in run("source")
+    if shell == "bash":
+        assert "clean" in run("complete", COMP_WORDS="fieldmover cl", COMP_CWORD="1")
+
+
+def test_every_option_reaches_its_command(place, capfd):
+    job = str(place.job)
+    assert main(["move", job, "--quiet", "--dry-run"]) == 0
+    assert main(["survey", str(place.source), "--job", str(place.folder / "new.toml")]) == 0
+    assert (place.folder / "new.toml").exists()
+    assert main(["clean", job, "--quiet"]) == 2
+    assert "clean keeps the grid of the source" in capfd.readouterr().err
+    assert main(["move", job, "--quiet"]) == 0
+    options = [
+        "--against",
+        str(place.target),
+        "--make-limits",
+        "0.1",
+        "--report",
+        str(place.folder / "again"),
+    ]
+    assert main(["check", job, "--quiet", *options]) == 0
+    assert (place.folder / "again" / "limits.toml").exists()
+    assert (
+        json.loads((place.folder / "again" / "report.json").read_text())["figures"]["against"]["cosine"]
+        > 1 - 1e-12
+    )
+
+
+def test_quiet_shows_no_progress_but_the_results(place, capfd):
+    assert main(["move", str(place.job), "--quiet"]) == 0
+    shown = capfd.readouterr()
+    assert shown.err == ""
+    assert "within limits" in shown.out

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import os
+import re
 import tomllib
 
 import h5py
@@ -77,7 +79,11 @@ def test_limits_against_a_report_made_before(check):
 
 
 def test_a_change_against_a_report(tmp_path):
-    report = {"schema": {"name": "fieldmover report", "version": 2}, "figures": {"energy_change": 2.0}, "fields": {}}
+    report = {
+        "schema": {"name": "fieldmover report", "version": 2},
+        "figures": {"energy_change": 2.0},
+        "fields": {},
+    }
     report |= {"fluid": {}, "regions": {"core": {"energy": 0.0}}, "coverage": None}
     (tmp_path / "old.json").write_text(json.dumps(report))
 
@@ -100,12 +106,21 @@ def test_a_change_against_a_report(tmp_path):
         ("regions.rign.energy = 1", "there is no such figure; the nearest is 'regions.ring.energy'"),
         ("fluid.velocity.change = 1", "fluid.velocity.change: there is no such figure"),
         ("divergence = { within = -1, of = 'x' }", "limits.divergence.within: found -1"),
-        ("divergence = { within = 1 }", "limits.divergence.of: missing; give the report.json to compare with"),
+        (
+            "divergence = { within = 1 }",
+            "limits.divergence.of: missing; give the report.json to compare with",
+        ),
         ("divergence = { within = 1, of = 'none.json' }", "none.json: no such file"),
         ("divergence = { within = 1, of = 'job.toml' }", "job.toml: not a report"),
         ("divergence = { within = 1, of = 'list.json' }", "list.json: found JSON that is no report"),
-        ("energy_change = { within = 1, of = 'good/report.json' }\nmoved.strength.largest = 'x'", "'x' is not a number"),
-        ("coverage.volume = 1\n[regions.far]\nradius = 1\ncentre = [90, 0, 0]", "regions.far: shell of radii"),
+        (
+            "energy_change = { within = 1, of = 'good/report.json' }\nmoved.strength.largest = 'x'",
+            "'x' is not a number",
+        ),
+        (
+            "coverage.volume = 1\n[regions.far]\nradius = 1\ncentre = [90, 0, 0]",
+            "regions.far: shell of radii",
+        ),
         ("coverage.volume = 1\n[regions.far]\nradius = 1\nradii = [1, 2]", "give from and to (a box)"),
         ("coverage.volume = 1\n[regions.far]\nfrom = [1, 2, 3]", "give from and to (a box)"),
         ("coverage.volume = 1\n[regions.far]\nradii = [2, 1]", "must increase"),
@@ -134,12 +149,14 @@ def test_limits_made_from_a_good_run_pass_there_and_fail_on_a_worse_file(check, 
     assert status == 0
     assert f"limits: {tmp_path / 'report' / 'limits.toml'}" in said
     table = (tmp_path / "report" / "limits.toml").read_text()
+    assert str(tmp_path) not in table  # files are named from the folder of the job
     limits = tomllib.loads(table)["limits"]
     assert limits["divergence"] == 1e-14
     assert limits["stored"]["energy"]["total"]["within"] == 0.1
     assert "energy_change" in limits["regions"]["ring"]
     good = tmp_path / "good-limits.toml"
-    good.write_text(table.replace("report/report.json", "kept.json"))
+    kept = os.path.relpath(tmp_path / "kept.json", moved)
+    good.write_text(re.sub(r'of = "[^"]*"', f'of = "{kept}"', table))
     (tmp_path / "kept.json").write_bytes((tmp_path / "report" / "report.json").read_bytes())
     tables = "[regions]\nring = { radii = [3, 5] }\n" + good.read_text()
     status, said, report = check(tables)
@@ -157,14 +174,22 @@ def test_limits_made_from_a_good_run_pass_there_and_fail_on_a_worse_file(check, 
 
 
 def test_made_limits_are_rounded_up_and_leave_out_what_was_not_measured(tmp_path):
-    report = {"figures": {"divergence": 1.234e-5, "energy_change": -0.1, "mass_change": None}, "coverage": None}
-    report |= {"fields": {"stored": {"energy": {"total": 2.0}}}, "fluid": {}, "regions": {}}
-    names = ["divergence", "energy_change", "mass_change", "stored.energy.total"]
-    text = limits_table(report, names, 0.5, tmp_path / "r.json")
+    report = {
+        "figures": {"divergence": 1.234e-5, "energy_change": -0.1, "mass_change": None},
+        "coverage": None,
+    }
+    report |= {
+        "fields": {"stored": {"energy": {"total": 2.0}}},
+        "fluid": {"hot gas": {"change": 2.0}},
+        "regions": {},
+    }
+    names = ["fluid.hot gas.change", "divergence", "energy_change", "mass_change", "stored.energy.total"]
+    text = limits_table(report, names, 0.5, "good/r.json")
     assert tomllib.loads(text)["limits"] == {
+        "fluid.hot gas.change": 3.0,
         "divergence": 1.9e-5,
         "energy_change": 0.15,
-        "stored": {"energy": {"total": {"within": 0.5, "of": str(tmp_path / "r.json")}}},
+        "stored": {"energy": {"total": {"within": 0.5, "of": "good/r.json"}}},
     }
 
 
@@ -174,11 +199,49 @@ def test_a_report_of_another_version_is_told(tmp_path):
         verdicts({"divergence": 1.0}, {"divergence": Within(within=1, of="old.json")}, tmp_path)
 
 
+# -- two files ----------------------------------------------------------------------------------------------
+
+
+def test_a_target_against_another_run(check, moved, tmp_path):
+    other = moved / "other.h5"
+    other.write_bytes((moved / "ring-cartesian.h5").read_bytes())
+    with h5py.File(other, "r+") as file:
+        for name in ("Bx", "By", "Bz"):
+            file[name][...] *= 1.25
+    limits = "[limits]\nagainst.cosine = 1.000001\nagainst.normalised_error = 0.1\nagainst.energy_ratio = 1\n"
+    status, said, report = check(limits, against=str(other))
+    assert status == 3
+    assert "limits exceeded: against.normalised_error" in said
+    found = report["figures"]["against"]
+    assert found["energy_ratio"] == pytest.approx(0.64)
+    assert found["normalised_error"] == pytest.approx(0.2)
+    energy = report["against"]["figures"]["energy.total"]
+    assert energy["relative"] == pytest.approx(-0.36)
+    for text in (
+        said,
+        (tmp_path / "report" / "report.html").read_text(),
+        (tmp_path / "report" / "summary.md").read_text(),
+    ):
+        assert "energy.total" in text
+        assert "other.h5" in text
+
+
+def test_two_files_with_nothing_to_compare(check, moved):
+    status, said, _ = check("", against=str(moved / "ring.h5"))
+    assert status == 4
+    assert "ring.h5: no dataset '/Bx'" in said
+    status, said, _ = check("", against=str(moved / "ring.h5"), changes=('target.file="none.h5"',))
+    assert status == 2
+    assert "there is nothing to compare with" in said
+
+
 # -- clean --------------------------------------------------------------------------------------------------
 
 CLEAN = JOB.replace(JOB[JOB.index("[target.grid]") : JOB.index("[target.magnetic]")], "")
 CLEAN = CLEAN.replace('at   = "faces"', 'at   = "faces"\nbasis = "physical"')
-CLEAN = CLEAN.replace("velocity = [", 'velocity = { basis = "physical", data = [').replace('"/vz"]', '"/vz"] }')
+CLEAN = CLEAN.replace("velocity = [", 'velocity = { basis = "physical", data = [').replace(
+    '"/vz"]', '"/vz"] }'
+)
 
 
 def test_clean_keeps_grid_and_fluid(tmp_path, capsys):
@@ -194,7 +257,9 @@ def test_clean_keeps_grid_and_fluid(tmp_path, capsys):
     report = json.loads((tmp_path / "ring-cartesian-report" / "report.json").read_text())
     assert list(report["fields"]) == ["source", "cleaned", "stored"]
     assert report["fields"]["source"]["divergence"]["linf"] > 1e-4
-    assert report["figures"]["energy_lost"]["cleaning"] == pytest.approx(-report["figures"]["energy_change"], rel=1e-6)
+    assert report["figures"]["energy_lost"]["cleaning"] == pytest.approx(
+        -report["figures"]["energy_change"], rel=1e-6
+    )
     assert report["coverage"]["whole"] == 24 * 16 * 32
     assert work(Options("check", str(job), quiet=True)) == 0
 
@@ -202,7 +267,10 @@ def test_clean_keeps_grid_and_fluid(tmp_path, capsys):
 def test_clean_and_move_want_different_jobs(tmp_path, capsys):
     write_snapshot(tmp_path / "ring.h5", (12, 8, 16))
     job = tmp_path / "job.toml"
-    for text, command, words in ((JOB, "clean", "clean keeps the grid"), (CLEAN, "move", "target.grid: missing")):
+    for text, command, words in (
+        (JOB, "clean", "clean keeps the grid"),
+        (CLEAN, "move", "target.grid: missing"),
+    ):
         job.write_text(text)
         assert work(Options(command, str(job), quiet=True)) == 2
         assert words in capsys.readouterr().err

@@ -89,7 +89,7 @@ def test_a_good_job(tmp_path):
     assert job.target.fluid["density"].data == "/rho"
     assert job.target.fluid["velocity"].outside == 1
     assert job.move.order == 3
-    assert job.move.outside == "refuse"
+    assert job.move.outside == "least energy"
     assert "mass_change" not in job.limits
 
 

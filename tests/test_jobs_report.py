@@ -68,7 +68,7 @@ def test_pictures_and_texts_say_the_same():
     assert len(scales) == 1
     for picture in shown.values():
         pixels = image.imread(io.BytesIO(picture.png), format="png")
-        assert pixels.shape[:2] == (430, 500)
+        assert pixels.shape[:2] == (440, 500)
         assert pixels[..., :3].std() > 0.05
 
 
@@ -79,7 +79,9 @@ def test_fields_without_contrast_and_sides_that_miss_the_plane(strength):
         grids = [before, BOX]
         sides = [(np.full((3, *grid.shape), strength), np.zeros(grid.shape)) for grid in grids]
         shown = pictures([Plane.through(BOX, 1)], grids, sides)
-        wanted = "no cell of it lies in this plane" if before is far else f"up to {strength * np.sqrt(3):.4g},"
+        wanted = (
+            "no cell of it lies in this plane" if before is far else f"up to {strength * np.sqrt(3):.4g},"
+        )
         assert wanted in shown[0].text
 
 

@@ -23,10 +23,10 @@ from fieldmover.forms import FaceFlux
 from fieldmover.grids import cartesian_grid
 from fieldmover.jobs.demo import job_text, write_snapshot
 from fieldmover.jobs.details import histogram
-from fieldmover.jobs.names import FIELD, known
+from fieldmover.jobs.names import AGAINST, FIELD, known
 from fieldmover.jobs.verdicts import figures_of
 from fieldmover.jobs.worker import Options, work
-from fieldmover.report.charts import lines
+from fieldmover.report.charts import bars, lines
 from fieldmover.report.figures import Picture
 from fieldmover.report.junit import junit
 from fieldmover.report.meaning import meaning
@@ -34,7 +34,7 @@ from fieldmover.report.page import page
 from fieldmover.report.summary import CAP, append_step_summary, markdown
 from fieldmover.report.write import write_report
 
-HOSTILE = "<script>alert(1)</script> & \"quotes\" ' | `ticks` \x07"
+HOSTILE = '<script>alert(1)</script> & "quotes" \' | `ticks` \x07'
 REGIONS = """
 [regions]
 ring = { centre = [0, 0, 0], radii = [3, 5] }
@@ -48,7 +48,11 @@ def folder(tmp_path_factory):
     """The report of a small hand-over with regions; one limit is exceeded."""
     place = tmp_path_factory.mktemp("job")
     write_snapshot(place / "ring.h5", (24, 16, 32))
-    text = job_text().replace("cells = 128", "cells = 16").replace("energy_change = 0.02", "energy_change = 1e-9")
+    text = (
+        job_text()
+        .replace("cells = 128", "cells = 16")
+        .replace("energy_change = 0.02", "energy_change = 1e-9")
+    )
     (place / "ring.toml").write_text(text + REGIONS, encoding="utf-8")
     assert work(Options("move", str(place / "ring.toml"), quiet=True)) == 3
     return place / "ring-cartesian-report"
@@ -64,9 +68,14 @@ def report(folder):
 
 def test_the_names_are_those_that_are_measured(report):
     measured = figures_of(report)
-    assert set(measured) <= {*known(["density"], ["ring", "core", "box"]), "coverage.cells", "coverage.whole", "coverage.cut"}
+    assert set(measured) <= {
+        *known(["density"], ["ring", "core", "box"]),
+        "coverage.cells",
+        "coverage.whole",
+        "coverage.cut",
+    }
     missing = set(known(["density"], ["ring", "core", "box"])) - set(measured)
-    assert missing == set()
+    assert missing == {f"against.{name}" for name in AGAINST}
     grid = cartesian_grid([0, 1], [0, 1], [0, 1])
     zero = FaceFlux(grid, (np.zeros((2, 1, 1)), np.zeros((1, 2, 1)), np.zeros((1, 1, 2))))
     assert tuple(flattened(diagnose(zero).as_dict())) == FIELD
@@ -168,7 +177,9 @@ def test_the_page_leads_with_verdict_and_limits(html, report):
 
 def test_pictures_and_charts_have_texts_with_numbers(html):
     found = Page(html)
-    texts = [image.get("alt") for image in found.all("img")] + [svg.get("aria-label") for svg in found.all("svg")]
+    texts = [image.get("alt") for image in found.all("img")] + [
+        svg.get("aria-label") for svg in found.all("svg")
+    ]
     assert len(texts) == 14
     assert all(re.search(r"\d", text) and len(text) > 40 for text in texts)
     for region in (e for e in found.root.iter() if e.get("class") == "scroll"):
@@ -191,7 +202,14 @@ def test_what_a_job_says_stays_text(report):
 @pytest.mark.parametrize("limits", [True, False])
 def test_a_page_of_little(report, limits):
     """A check of a source without a target."""
-    report |= {"regions": {}, "fluid": {}, "energy_covered": {}, "coverage": None, "profile": None, "spectra": {}}
+    report |= {
+        "regions": {},
+        "fluid": {},
+        "energy_covered": {},
+        "coverage": None,
+        "profile": None,
+        "spectra": {},
+    }
     report |= {"cleaning": None, "divergences": {}, "limits": report["limits"] if limits else []}
     text = Page(page(report)).text()
     assert ("no limits were set" in text.lower()) == (not limits)
@@ -200,7 +218,9 @@ def test_a_page_of_little(report, limits):
 
 # -- in a browser -------------------------------------------------------------------------------------------
 
-BROWSER = next((path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None)
+BROWSER = next(
+    (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None
+)
 PROBE = """<script>addEventListener("load", () => {
   const root = document.documentElement;
   const loose = [...document.querySelectorAll("body *")].filter(e =>
@@ -266,7 +286,17 @@ def test_junit_has_only_what_its_schema_allows(folder):
     root = ElementTree.parse(folder / "report.xml").getroot()
     allowed = {
         "testsuites": {"name", "time", "tests", "failures", "disabled", "errors"},
-        "testsuite": {"name", "tests", "failures", "errors", "time", "skipped", "timestamp", "hostname", "id"},
+        "testsuite": {
+            "name",
+            "tests",
+            "failures",
+            "errors",
+            "time",
+            "skipped",
+            "timestamp",
+            "hostname",
+            "id",
+        },
         "testcase": {"name", "classname", "time", "status", "assertions", "class", "file", "line", "group"},
         "failure": {"message", "type"},
         "system-out": set(),
@@ -275,7 +305,8 @@ def test_junit_has_only_what_its_schema_allows(folder):
     for element in root.iter():
         assert set(element.attrib) <= allowed[element.tag]
         assert {child.tag for child in element} <= children.get(element.tag, set())
-    for tag, needed in {"testsuite": {"name", "tests", "failures", "errors"}, "testcase": {"name", "classname"}}.items():
+    required = {"testsuite": {"name", "tests", "failures", "errors"}, "testcase": {"name", "classname"}}
+    for tag, needed in required.items():
         assert all(needed <= set(element.attrib) for element in root.iter(tag))
 
 
@@ -292,7 +323,9 @@ def test_the_summary_goes_to_the_service_and_never_past_its_cap(tmp_path, monkey
     path.write_text("before\n", encoding="utf-8")
     monkeypatch.setenv("GITHUB_STEP_SUMMARY", str(path))
     write_report(tmp_path / "here", report, [])
-    assert path.read_text(encoding="utf-8") == "before\n" + (tmp_path / "here" / "summary.md").read_text(encoding="utf-8")
+    assert path.read_text(encoding="utf-8") == "before\n" + (tmp_path / "here" / "summary.md").read_text(
+        encoding="utf-8"
+    )
     append_step_summary("é" * CAP)
     append_step_summary("more")
     assert CAP - 1 <= path.stat().st_size <= CAP
@@ -313,11 +346,25 @@ def test_a_report_holds_finite_numbers_only(tmp_path, report):
 def test_writing_replaces_what_was_there(tmp_path, report):
     for title in ("one", "two"):
         write_report(tmp_path, {**report, "title": title}, [])
-    assert sorted(path.name for path in tmp_path.iterdir()) == ["report.html", "report.json", "report.xml", "summary.md"]
+    assert sorted(path.name for path in tmp_path.iterdir()) == [
+        "report.html",
+        "report.json",
+        "report.xml",
+        "summary.md",
+    ]
     assert "<h1>two</h1>" in (tmp_path / "report.html").read_text()
 
 
 # -- charts -------------------------------------------------------------------------------------------------
+
+
+def test_bars_leave_room_for_their_numbers():
+    svg = ElementTree.fromstring(
+        bars({"source": (1.0, "0.00812345 (+1.00e-16)"), "stored": (0.0, "0")}, "text")
+    )
+    for text in svg.iter("text"):
+        width = 7.0 * len(text.text)  # twelve pixels high, so about so wide
+        assert text.get("text-anchor") == "end" or float(text.get("x")) + width < 440
 
 
 def test_curves_lie_in_their_frame_whatever_the_numbers():
@@ -330,7 +377,9 @@ def test_curves_lie_in_their_frame_whatever_the_numbers():
     for series, log in cases:
         svg = lines(series, ("x", "y"), "text", log)
         ElementTree.fromstring(svg)
-        numbers = [float(n) for path in re.findall(r' d="([^"]*)"', svg) for n in re.findall(r"-?[\d.]+", path)]
+        numbers = [
+            float(n) for path in re.findall(r' d="([^"]*)"', svg) for n in re.findall(r"-?[\d.]+", path)
+        ]
         assert min(numbers) >= 0
         assert max(numbers) <= 440
     assert lines({"a": [(0, 1)]}, ("x", "y"), "nothing above 0") == "<p>nothing above 0</p>"

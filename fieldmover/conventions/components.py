@@ -17,6 +17,7 @@ from fieldmover.errors import DataError, FieldError
 from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges, close_faces
 from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, area_factors, at, outer, sines, volume_factors
+from fieldmover.grids.placement import placement
 
 Array = NDArray[np.float64]
 Factors = tuple[Array, Array, Array]
@@ -147,14 +148,14 @@ def to_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
     >>> to_cartesian(grid, np.array([0.0, 1.0, 2.0]).reshape(3, 1, 1, 1), "physical").ravel().round(12)
     array([-1.,  0.,  2.])
     """
-    if basis == "cartesian" or grid.kind == "cartesian":
+    if basis == "cartesian" or (grid.kind == "cartesian" and placement(grid) is None):
         return vector
     return np.asarray(np.einsum("ij...,j...->i...", _tangents(grid, basis), vector))
 
 
 def from_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
     """Components of a vector at cell centres in a basis of the grid, the inverse of `to_cartesian`."""
-    if basis == "cartesian" or grid.kind == "cartesian":
+    if basis == "cartesian" or (grid.kind == "cartesian" and placement(grid) is None):
         return vector
     tangents = np.moveaxis(_tangents(grid, basis), (0, 1), (-2, -1))
     return np.asarray(

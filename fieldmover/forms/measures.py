@@ -9,6 +9,7 @@ faces. On Cartesian, cylindrical and spherical grids every conductance is a prod
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import reduce
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +21,7 @@ from fieldmover.grids.grid import Grid, at, cosine_drop, outer, sines, volume_fa
 
 Array = NDArray[np.float64]
 Factors = tuple[Three, Three, Three]
+Conductances = Sequence["Array | Products"]
 
 _SLAB = 1 << 14  # cells worked on at a time
 
@@ -57,6 +59,29 @@ def face_factors(grid: Grid) -> Factors | None:
         belt = cosine_drop(grid.nodes[1])
         return (r**2 * i1, belt, d3), (d1, sines(grid) * i2, d3), (d1, d2 / np.sin(centre[1]), i3)
     return None
+
+
+class Products:
+    """Products of one number per axis, worked out where they are asked for: what takes the place of a large array.
+
+    Parameters
+    ----------
+    factors : tuple of three ndarrays
+
+    Examples
+    --------
+    >>> Products((np.arange(3.0), np.arange(4.0), np.ones(2)))[1:, 2]
+    array([[2., 2.],
+           [4., 4.]])
+    """
+
+    def __init__(self, factors: Three) -> None:
+        self._factors = factors
+
+    def __getitem__(self, index: int | slice | tuple[int | slice, ...]) -> Array:
+        given = index if isinstance(index, tuple) else (index,)
+        whole = (*given, *[slice(None)] * (3 - len(given)))
+        return np.asarray(reduce(np.multiply.outer, (f[i] for f, i in zip(self._factors, whole, strict=True))))
 
 
 def face_conductances(grid: Grid) -> Three:

@@ -7,10 +7,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from fieldmover import compute
 from fieldmover.errors import GridError
 from fieldmover.grids.axes import Poles
 from fieldmover.grids.axis_splines import axis_spline, fit, unfolded
+from fieldmover.grids.folds import least_corner
 from fieldmover.grids.grid import Grid, at, checked_ends
 from fieldmover.grids.maps import Triple
 from fieldmover.grids.position_spline import PositionSpline
@@ -21,7 +21,6 @@ Ends = tuple[Poles, Poles, Poles]
 
 _SAME = 1e-9  # of the size of the grid: nodes nearer than this are the same
 _OPPOSITE = 1e-2  # by how much the directions of two meridians may differ at a pole and still be joined
-_ROWS = 8
 
 
 @dataclass(frozen=True, eq=False)
@@ -263,21 +262,17 @@ def _refuse_repeats(table: Array, rings: list[int | None], ends: Ends, size: flo
 
 def _refuse_folds(table: Array) -> None:
     """Refuse cells with a corner at which the three edges are not right-handed."""
-    n1 = table.shape[1] - 1
-    parts = compute.slabs(n1, _ROWS)
-    least = compute.for_each(lambda rows: _least_corner(table[:, rows.start : rows.stop + 1], rows.start), parts)
-    value, i, j, k, _, _ = min(least, key=lambda row: row[0])
+    value, cell, right, wrong = least_corner(table)
     if value >= 0.0:
         return
-    right, left = (sum(row[c] for row in least) for c in (4, 5))
     if right == 0:
         raise GridError(
             "node positions: the axes are left-handed (the Jacobian is negative everywhere), expected a right-handed "
             "order; exchange two axes or reverse one"
         )
     raise GridError(
-        f"cell {[int(i), int(j), int(k)]} of the table is folded: the least Jacobian at its corners is {value:.3g} "
-        f"(volume per cell), expected positive; {int(left)} cells are folded or inverted in all"
+        f"cell {list(cell)} of the table is folded: the least Jacobian at its corners is {value:.3g} (volume per "
+        f"cell), expected positive; {wrong} cells are folded or inverted in all"
     )
 
 
@@ -352,37 +347,3 @@ def _folded(cells: int, poles: Poles) -> list[tuple[int, bool]]:
     up = [(i, False) for i in range(cells)]
     down = [(i, True) for i in range(cells - 1, -1, -1)]
     return {None: up, "low": down + up, "high": up + down, "both": up + down}[poles]
-
-
-@compute.kernel
-def _least_corner(table, offset):
-    """Least triple product of edges at the corners of cells (value, i, j, k), and cells with only good, and bad, ones.
-
-    Corners with an edge of no length, on poles, are left out.
-    """
-    least, at_i, at_j, at_k, right, left = np.inf, 0, 0, 0, 0, 0
-    e = np.empty((3, 3))
-    for i in range(table.shape[1] - 1):
-        for j in range(table.shape[2] - 1):
-            for k in range(table.shape[3] - 1):
-                smallest = np.inf
-                for corner in range(8):
-                    a, b, c = corner & 1, (corner >> 1) & 1, (corner >> 2) & 1
-                    for x in range(3):
-                        e[x, 0] = table[x, i + 1, j + b, k + c] - table[x, i, j + b, k + c]
-                        e[x, 1] = table[x, i + a, j + 1, k + c] - table[x, i + a, j, k + c]
-                        e[x, 2] = table[x, i + a, j + b, k + 1] - table[x, i + a, j + b, k]
-                    det = (
-                        e[0, 0] * (e[1, 1] * e[2, 2] - e[2, 1] * e[1, 2])
-                        - e[1, 0] * (e[0, 1] * e[2, 2] - e[2, 1] * e[0, 2])
-                        + e[2, 0] * (e[0, 1] * e[1, 2] - e[1, 1] * e[0, 2])
-                    )
-                    if det != 0.0:
-                        smallest = min(smallest, det)
-                if smallest > 0.0:
-                    right += 1
-                else:
-                    left += 1
-                if smallest < least:
-                    least, at_i, at_j, at_k = smallest, i + offset, j, k
-    return least, at_i, at_j, at_k, right, left

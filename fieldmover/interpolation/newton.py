@@ -1,16 +1,17 @@
 """Inverse of a map without closed form: Newton's method on the spline of its node positions.
 
-Points come along lines, so each starts where the polynomial through the six before it leads, or, where a line begins, a
-chord step away from its neighbour. Newton's error is the square of its step, so a step below 2e-6 of a cell is the last,
-and one evaluation of the spline a point is the rule. Beside a pole the step is taken in the plane of the ring, where the map is smooth
-though its coordinates are not. Points that Newton does not find from their neighbour start again from the
-nearest of some thousand places in the grid (a k-d tree, Bentley 1975, Multidimensional binary search trees used for
-associative searching), with steps halved until the residual falls.
+Points come along lines, so each starts where the polynomial through the six before it leads, or, where a line
+begins, a chord step away from its neighbour. Newton's error is the square of its step, so a step below 2e-6 of a cell
+is the last, and one evaluation of the spline a point is the rule. Beside a pole the step is taken in the plane of the
+ring, where the map is smooth though its coordinates are not. Points not found from their neighbour start again from
+the nearest of some thousand places in the grid (a k-d tree, Bentley 1975, Multidimensional binary search trees used
+for associative searching), with steps halved until the residual falls.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from weakref import WeakKeyDictionary
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +20,7 @@ from scipy.spatial import cKDTree
 from fieldmover import compute
 from fieldmover.errors import GridError
 from fieldmover.grids.grid import Grid
-from fieldmover.grids.position_spline import PositionSpline, basis, hunt, position
+from fieldmover.grids.position_spline import PositionSpline, evaluate
 from fieldmover.grids.tabulated import TabulatedMap
 from fieldmover.interpolation.splines import crosses_pole
 
@@ -37,6 +38,9 @@ _POLAR = 4.0  # within so many cells of a pole steps are taken in the plane of t
 _BLOCK = 64  # points whose tangents are done together
 _ROUND_OFF = 1e-15  # of the size of the grid: no residual is expected below it
 _ON_POLE = 1e-6  # of the first cell: nearer to a pole tangents are taken at this distance, where they are finite
+
+
+_splines: WeakKeyDictionary[Grid, PositionSpline] = WeakKeyDictionary()
 
 
 class NewtonInverse:
@@ -115,8 +119,13 @@ class NewtonInverse:
 
 
 def _spline_of(grid: Grid) -> PositionSpline:
-    one, two, three = (grid.ring_axis[axis] if crosses_pole(grid, axis) else None for axis in range(3))
-    return PositionSpline(grid.nodes, grid.node_positions(), grid.periodic, grid.poles, (one, two, three))
+    """The spline of a grid's nodes, kept as long as the grid is."""
+    spline = _splines.get(grid)
+    if spline is None:
+        one, two, three = (grid.ring_axis[axis] if crosses_pole(grid, axis) else None for axis in range(3))
+        spline = PositionSpline(grid.nodes, grid.node_positions(), grid.periodic, grid.poles, (one, two, three))
+        _splines[grid] = spline
+    return spline
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,8 +152,8 @@ class _Starts:
             lattice.append(both)
         x = np.stack(spline.positions(lattice[0][:, None, None], lattice[1][None, :, None], lattice[2][None, None, :]))
         middle = x[:, 1::2, 1::2, 1::2]
-        reach = np.zeros(middle.shape[1:])
-        m1, m2, m3 = reach.shape
+        m1, m2, m3 = ((c.size - 1) // 2 for c in lattice)
+        reach = np.zeros((m1, m2, m3))
         for a, b, c in np.ndindex(3, 3, 3):
             corner = x[:, a : a + 2 * m1 - 1 : 2, b : b + 2 * m2 - 1 : 2, c : c + 2 * m3 - 1 : 2]
             reach = np.maximum(reach, np.sqrt(((corner - middle) ** 2).sum(axis=0)))
@@ -164,7 +173,7 @@ def _newton(
     cells, b, work = offsets[:3].copy(), np.empty((3, 2, 6)), np.empty((3, 18))
     value, jacobian, step, old = np.empty(3), np.empty((3, 3)), np.empty(3), np.empty(3)
     g, known, inverse = np.empty(3), np.empty(3), np.empty((3, 3))
-    trail, here, width = np.empty((_TRAIL, 3)), np.empty(3), np.empty(3)
+    trail, here = np.empty((_TRAIL, 3)), np.empty(3)
     length = 0  # how many points of the trail there are
     line_g, line_known, line_inverse = np.empty(3), np.empty(3), np.empty((3, 3))
     inverses = np.empty((3, 3, _BLOCK))
@@ -176,6 +185,7 @@ def _newton(
             back += (x[d, n] - line_known[d]) ** 2
             here[d] = x[d, n]
         along, back = np.sqrt(along), np.sqrt(back)
+        found = _LOST
         if linked:
             begins = along > 2.0 * before and back < along
             if begins:
@@ -186,36 +196,48 @@ def _newton(
             _advance(g, step, 1.0, frame)
             if begins or abs(along - before) > 0.1 * before:
                 length = 0
-            elif length > 2:
+            elif length > 2 and _extrapolate(trail, length, g, step, frame):
+                # the rule, kept apart from the rest because calls with many arrays cost as much as the evaluation
+                evaluate(g, nodes, pieces, first, offsets, coefficients, strides, cells, b, work, value, jacobian)
+                _invert(jacobian, inverse)
+                _multiply(inverse, here, value, step)
+                found = _FOUND
                 for d in range(3):
-                    width[d] = nodes[cells[d] + 1] - nodes[cells[d]]
-                _extrapolate(trail, length, g, width, frame)
+                    if not abs(step[d]) <= _LAST_STEP * (nodes[cells[d] + 1] - nodes[cells[d]]):
+                        found = _LOST
+                if found == _FOUND:
+                    for d in range(3):
+                        g[d] = _on_turn(g[d] + step[d], frame[d, 0], frame[d, 4])
+                    _copy(here, known)
+                    if _clamp(g, frame) > 0:  # far outside, where the spline means nothing
+                        found = _LOST
         else:
             for d in range(3):
                 g[d] = start[d, 0] if chained else start[d, n]
             length = 0
         before = along
-        found = _solve(
-            g,
-            known,
-            inverse,
-            here,
-            nodes,
-            pieces,
-            first,
-            offsets,
-            coefficients,
-            strides,
-            frame,
-            tiny,
-            cells,
-            b,
-            work,
-            value,
-            jacobian,
-            step,
-            old,
-        )
+        if found == _LOST:
+            found = _solve(
+                g,
+                known,
+                inverse,
+                here,
+                nodes,
+                pieces,
+                first,
+                offsets,
+                coefficients,
+                strides,
+                frame,
+                tiny,
+                cells,
+                b,
+                work,
+                value,
+                jacobian,
+                step,
+                old,
+            )
         state[n] = found
         linked = chained and found != _LOST
         length = _remember(trail, length, g, frame) if found == _FOUND else 0
@@ -250,9 +272,9 @@ def _remember(trail, length, g, frame):
     """Put g in front of the trail, on the same turn round a seam; a trail ends beside a pole. Returns its length."""
     for d in range(3):
         for end in range(2):
-            if frame[d, 5] >= 0.0 and frame[d, 6 + end] > 0.0:
-                if abs(g[d] - frame[d, end]) < _POLAR * frame[d, 2 + end]:
-                    return 0
+            is_pole = frame[d, 5] >= 0.0 and frame[d, 6 + end] > 0.0
+            if is_pole and abs(g[d] - frame[d, end]) < _POLAR * frame[d, 2 + end]:
+                return 0
     for d in range(3):
         for m in range(_TRAIL - 1, 0, -1):
             trail[m, d] = trail[m - 1, d]
@@ -263,22 +285,28 @@ def _remember(trail, length, g, frame):
 
 
 @compute.kernel
-def _extrapolate(trail, length, g, width, frame):
-    """The next place of a trail into g, unless it is far from there."""
-    far = False
+def _extrapolate(trail, length, g, place, frame):
+    """The next place of a trail into g, unless that is far from it; returns whether it was done."""
     for d in range(3):
-        factor, place = 1.0, 0.0
+        factor, place[d] = 1.0, 0.0
         for m in range(length):  # signed binomial coefficients of length
             factor *= (length - m) / (m + 1.0)
-            place += factor * trail[m, d]
+            place[d] += factor * trail[m, d]
             factor = -factor
-        shift = place - g[d]
+        shift = place[d] - g[d]
         if frame[d, 4] > 0.0:
             shift -= frame[d, 4] * np.round(shift / frame[d, 4])
-        far = far or abs(shift) > _ASTRAY * width[d]
-        width[d] = g[d] + shift
-    if not far:
-        _copy(width, g)
+        if abs(shift) > _ASTRAY * abs(trail[0, d] - trail[1, d]) + _ASTRAY * max(frame[d, 2], frame[d, 3]):
+            return False
+    for d in range(3):
+        g[d] = _on_turn(place[d], frame[d, 0], frame[d, 4])
+    return True
+
+
+@compute.kernel
+def _on_turn(value, low, turn):
+    """A coordinate brought back between its seam's ends."""
+    return value if turn == 0.0 else value - turn * np.floor((value - low) / turn)
 
 
 @compute.kernel
@@ -308,11 +336,7 @@ def _solve(
     worst, scale, last_walls, arrived = np.inf, 1.0, 0, False
     for _ in range(_STEPS):
         walls = 0 if arrived else _clamp(g, frame)
-        for d in range(3):
-            cells[d] = hunt(g[d], nodes, offsets[d], offsets[d + 1] - 2, cells[d])
-            basis(g[d], nodes, pieces, cells[d], b, d)
-        i, j, k = first[cells[0]], first[cells[1]], first[cells[2]]
-        position(coefficients, strides, i, j, k, b, work, value, jacobian)
+        evaluate(g, nodes, pieces, first, offsets, coefficients, strides, cells, b, work, value, jacobian)
         _invert(jacobian, inverse)
         if arrived:
             _copy(old, g)
@@ -374,8 +398,7 @@ def _advance(g, step, scale, frame):
             out = -out
         g[d] = frame[d, end] + sign * out
     for d in range(3):
-        if frame[d, 4] > 0.0:
-            g[d] -= frame[d, 4] * np.floor((g[d] - frame[d, 0]) / frame[d, 4])
+        g[d] = _on_turn(g[d], frame[d, 0], frame[d, 4])
 
 
 @compute.kernel

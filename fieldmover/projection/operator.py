@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.forms.fields import Three
+from fieldmover.forms.measures import Conductances
 from fieldmover.grids.grid import at
 
 Array = NDArray[np.float64]
@@ -46,7 +47,7 @@ class ProjectionOperator:
 
     Attributes
     ----------
-    conductances : tuple of three ndarrays
+    conductances : sequence of three ndarrays, or of three Products for all but `apply`
         Of all faces; 0 where the flux must not change.
     active : bool ndarray, shape (n1, n2, n3)
         Cells that have an equation; p is 0 in the others.
@@ -57,7 +58,7 @@ class ProjectionOperator:
         Axis whose low wall bounds a neutral hole.
     """
 
-    conductances: Three
+    conductances: Conductances
     active: Mask
     periodic: tuple[bool, bool, bool]
     open_walls: Walls

@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, Three
-from fieldmover.forms.measures import Factors, face_conductances, face_factors
+from fieldmover.forms.measures import Conductances, Factors, Products, face_conductances, face_factors
 from fieldmover.grids.grid import Grid, at
 from fieldmover.projection.nearest import common_scale, nearest_factors, weakened_cells
 from fieldmover.projection.operator import ProjectionOperator, Walls
@@ -84,17 +84,20 @@ def make_plan(
         frozen_masks(grid, frozen),
         excised_mask(grid, excised),
     )
+    factors = face_factors(grid) if weights is None else None
+    active = np.ones(grid.shape, dtype=bool)
+    if factors is not None and frozen_faces is None and cut is None:
+        operator = _operator(grid, [Products(f) for f in factors], active, is_open, hole)
+        return Plan(operator, factors, True, None, None, True, None, None, None)
     conductances = face_conductances(grid)
     user = face_weights(flux, weights, conductances)
-    factors = face_factors(grid) if user is None else None
     if user is not None:
         for g, w in zip(conductances, user, strict=True):
             g /= w
-    free, active = None, np.ones(grid.shape, dtype=bool)
+    free = None
     if frozen_faces is not None or cut is not None:
         free = _free_faces(conductances, frozen_faces, is_open, grid)
         active = _touched(free) if cut is None else _touched(free) & ~cut
-    direct = factors is not None and free is None
     if factors is None:
         factors = nearest_factors(conductances, free)
     scale = None if user is None else common_scale(conductances, factors)
@@ -105,11 +108,15 @@ def make_plan(
             g[mask] = 0.0
         weakened = weakened_cells(whole, sums_over_faces(conductances) * active)
         is_open = _open_somewhere(is_open, conductances)
+    operator = _operator(grid, conductances, active, is_open, hole)
+    metric = user is None and frozen_faces is None
+    return Plan(operator, factors, False, scale, weakened, metric, frozen_faces, free, cut)
+
+
+def _operator(grid: Grid, conductances: Conductances, active: Mask, is_open: Walls, hole: Hole) -> ProjectionOperator:
     around = hole_axis(grid)
     neutral = hole == "neutral" and around is not None and is_open[around][0]
-    operator = ProjectionOperator(conductances, active, grid.periodic, is_open, around if neutral else None)
-    metric = user is None and frozen_faces is None
-    return Plan(operator, factors, direct, scale, weakened, metric, frozen_faces, free, cut)
+    return ProjectionOperator(conductances, active, grid.periodic, is_open, around if neutral else None)
 
 
 def _free_faces(conductances: Three, frozen: Masks | None, is_open: Walls, grid: Grid) -> Masks:
@@ -135,7 +142,7 @@ def _open_somewhere(is_open: Walls, conductances: Three) -> Walls:
     return pairs[0], pairs[1], pairs[2]
 
 
-def sums_over_faces(conductances: Three) -> Array:
+def sums_over_faces(conductances: Conductances) -> Array:
     """Sum over the six faces of every cell."""
     total = np.zeros(conductances[0][:-1].shape)
     for axis, g in enumerate(conductances):

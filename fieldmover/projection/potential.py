@@ -13,16 +13,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
-from fieldmover.errors import ChargeError, FieldError
+from fieldmover.errors import ChargeError, FieldError, GridError
 from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges
 from fieldmover.forms.incidence import d2
-from fieldmover.grids.grid import Grid
+from fieldmover.grids.grid import Grid, area_factors, outer
 from fieldmover.projection.gauge import smoothing_gauge
 
 Array = NDArray[np.float64]
-Gauge = Literal["smooth", "none"]
+Gauge = Literal["smooth", "axial", "none"]
 
 _ROWS = 8  # planes per task
+_LAST_BITS = 1e-15
 _ROUND_OFF = 1e-10  # what counts as zero beside the sum of the fluxes it is the balance of
 
 
@@ -33,9 +34,11 @@ def potential(flux: FaceFlux, gauge: Gauge = "smooth") -> EdgePotential:
     ----------
     flux : FaceFlux
         Divergence-free to round-off.
-    gauge : {"smooth", "none"}
+    gauge : {"smooth", "axial", "none"}
         "smooth": least sum of w a^2 with w = dual area / edge length, the discrete form of div A = 0 with no A
-        through the walls. "none": as running sums leave it, zero along one axis.
+        through the walls. "axial": no component along the first axis without seam and poles, x or r (DeVore 2000,
+        Magnetic helicity generation by solar differential rotation, has z), smooth in the surface where that
+        begins; along a seam, where all axes have one, as little as there can be. "none": as running sums leave it.
 
     Returns
     -------
@@ -47,7 +50,8 @@ def potential(flux: FaceFlux, gauge: Gauge = "smooth") -> EdgePotential:
     FieldError
         If the flux has divergence (`project` removes it).
     ChargeError
-        If a closed surface of the grid, a sphere or a periodic plane, carries net flux.
+        If a closed surface of the grid, a sphere or a periodic plane, carries net flux (`mean_flux` takes it out
+        of periodic boxes).
 
     Examples
     --------
@@ -63,9 +67,81 @@ def potential(flux: FaceFlux, gauge: Gauge = "smooth") -> EdgePotential:
     _check_divergence(flux)
     edges = _running_sums(flux.grid, flux.faces)
     close_edges(flux.grid, edges)
-    if gauge == "smooth":
+    if gauge != "none":
         _subtract_gradient(edges, smoothing_gauge(flux.grid, edges))
+    if gauge == "axial":
+        _make_axial(flux.grid, edges)
     return EdgePotential(flux.grid, edges)
+
+
+def mean_flux(flux: FaceFlux) -> tuple[FaceFlux, FaceFlux]:
+    """Split off the mean field through periodic planes, which has no vector potential on a periodic grid.
+
+    Parameters
+    ----------
+    flux : FaceFlux
+        On a Cartesian grid; divergence-free, so that all planes normal to an axis carry the same.
+
+    Returns
+    -------
+    mean : FaceFlux
+        Of the uniform field that carries what each plane does that is periodic along both its axes; 0 along other
+        axes.
+    rest : FaceFlux
+        What is left of the flux; it has a potential.
+
+    Raises
+    ------
+    GridError
+        If the grid is not Cartesian.
+
+    Examples
+    --------
+    >>> import numpy as np, fieldmover as fm
+    >>> grid = fm.cartesian_grid(*[np.linspace(0, 1, 5)] * 3, periodic=(True, True, True))
+    >>> flux = fm.flux_from_function(grid, lambda x, y, z: (0 * x, 2 + np.sin(2 * np.pi * x), 0 * x))
+    >>> mean, rest = mean_flux(flux)
+    >>> round(float(mean.f2[0, 0, 0]), 12)  # 2 x area
+    0.125
+    >>> bool(np.isfinite(fm.potential(rest).edges[2]).all())
+    True
+    """
+    grid = flux.grid
+    factors = area_factors(grid)
+    if grid.kind != "cartesian" or factors is None:
+        raise GridError(f"mean field of a {grid.kind} grid: expected a Cartesian one")
+    mean = []
+    for axis, f in enumerate(flux.faces):
+        area = outer(factors[axis])
+        closed = all(seam for d, seam in enumerate(grid.periodic) if d != axis)
+        mean.append(area * (float(f.sum() / area.sum()) if closed else 0.0))
+    f1, f2, f3 = rest = [f - m for f, m in zip(flux.faces, mean, strict=True)]
+    for r, m in zip(rest, mean, strict=True):
+        r[np.abs(r) < _LAST_BITS * np.abs(m)] = 0.0  # of a uniform field nothing must be left to have a sum
+    return FaceFlux(grid, (mean[0], mean[1], mean[2])), FaceFlux(grid, (f1, f2, f3))
+
+
+def _make_axial(grid: Grid, edges: Three) -> None:
+    """Take the component along one axis out of a potential, by the gradient of its running sum."""
+    r = _sum_axis(grid)
+    if grid.poles[r] == "both":
+        raise FieldError("gauge: 'axial', but every axis has a seam or two poles; expected 'smooth' or 'none'")
+    g = np.zeros(grid.node_shape())
+    along, sums = np.moveaxis(edges[r], r, 0), np.moveaxis(g, r, 0)
+    rest = along.mean(axis=0) if grid.periodic[r] else np.zeros(along.shape[1:])
+    np.cumsum(along - rest, axis=0, out=sums[1:])
+    if grid.periodic[r]:
+        sums[-1] = 0.0
+    if grid.poles[r] == "high":
+        sums -= sums[-1].copy()
+    _subtract_gradient(edges, g)
+    along[...] = rest
+    close_edges(grid, edges)
+
+
+def _sum_axis(grid: Grid) -> int:
+    """The axis to add up along: an interval if there is one."""
+    return min(range(3), key=lambda d: (grid.periodic[d], grid.poles[d] == "both", grid.poles[d] is not None, d))
 
 
 def _subtract_gradient(edges: Three, g: Array) -> None:
@@ -102,14 +178,16 @@ def _running_sums(grid: Grid, faces: Three) -> Three:
     With axes (r, a, b) in cyclic order and A_r = 0: F_a = -d_r A_b and F_b = d_r A_a; what is left is
     F_r = d_a A_b - d_b A_a on the surface where the sums begin.
     """
-    r = min(range(3), key=lambda d: (grid.periodic[d], grid.poles[d] == "both", grid.poles[d] is not None, d))
+    r = _sum_axis(grid)
     order = (r, (r + 1) % 3, (r + 2) % 3)
     turned = [faces[d].transpose(order) for d in order]
     edges: list[Array] = [np.zeros(grid.edge_shape(d)) for d in range(3)]
     a_r, a_a, a_b = (edges[d].transpose(order) for d in order)
     f_r, f_a, f_b = turned
     if grid.periodic[r]:
-        loop = _loop_circulation(grid, order, f_a.sum(axis=0), f_b.sum(axis=0))
+        _refuse_charge(grid, float(f_a[:, 0].sum()), float(np.abs(f_a[:, 0]).sum()), (order[1], order[2], r))
+        _refuse_charge(grid, float(f_b[:, :, 0].sum()), float(np.abs(f_b[:, :, 0]).sum()), (order[2], r, order[1]))
+        loop = _loop_circulation(f_a.sum(axis=0), f_b.sum(axis=0))
         a_r[:] = loop / grid.shape[r]
         f_a, f_b = f_a - np.diff(a_r, axis=2), f_b + np.diff(a_r, axis=1)
     backward = grid.poles[r] == "high"
@@ -157,10 +235,8 @@ def _from_pole(f: Array, axis: int, backward: bool) -> Array:
     return sums - np.take(sums, [-1], axis=axis) if backward else sums
 
 
-def _loop_circulation(grid: Grid, order: tuple[int, int, int], f_a: Array, f_b: Array) -> Array:
+def _loop_circulation(f_a: Array, f_b: Array) -> Array:
     """Circulation G of A round each loop of a periodic axis, from summed fluxes: d_b G = f_a, d_a G = -f_b."""
-    _refuse_charge(grid, float(f_a[0].sum()), float(np.abs(f_a[0]).sum()), (order[1], order[2], order[0]))
-    _refuse_charge(grid, float(f_b[:, 0].sum()), float(np.abs(f_b[:, 0]).sum()), (order[2], order[0], order[1]))
     first = np.concatenate([[0.0], np.cumsum(f_a[0])])
     first[-1] = 0.0
     loop = first - np.concatenate([np.zeros((1, first.size)), np.cumsum(f_b, axis=0)])
@@ -174,12 +250,14 @@ def _refuse_charge(grid: Grid, net: float, total: float, order: tuple[int, int, 
         return
     normal, a, b = order
     names = grid.map.names
+    hint = ""
     if grid.periodic[a] and grid.periodic[b]:
         what = f"mean field along {names[normal]}: each periodic plane"
+        hint = " (mean_flux() splits it off)" if grid.kind == "cartesian" else ""
     else:
         what = f"charge in the hole inside {names[normal]} = {grid.nodes[normal][0]:.6g}: its surface"
     raise ChargeError(
         f"{what} carries a net flux of {net:.9g} (of {total:.6g} in and out), expected 0: such a field has no vector "
-        "potential",
+        f"potential{hint}",
         net,
     )

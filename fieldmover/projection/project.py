@@ -16,8 +16,8 @@ from numpy.typing import ArrayLike, NDArray
 
 from fieldmover.errors import NotConverged
 from fieldmover.forms.fields import FaceFlux, Three
-from fieldmover.forms.measures import Factors, face_conductances
-from fieldmover.grids.grid import at, outer
+from fieldmover.forms.measures import Factors, Products, face_conductances
+from fieldmover.grids.grid import at
 from fieldmover.projection.conjugate import conjugate_gradients
 from fieldmover.projection.consistency import balance_walls, check_held_cells, check_islands
 from fieldmover.projection.exact import close, lines, search
@@ -137,8 +137,8 @@ def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) 
         method, stopped = "conjugate gradients", "tolerance reached"
         if plan.free is None:
             # What the tolerance leaves goes in the weights of the nearest separable operator.
-            products = (outer(plan.factors[0]), outer(plan.factors[1]), outer(plan.factors[2]))
-            _direct(replace(operator, conductances=products), plan.factors, faces, net, before.largest)
+            products = replace(operator, conductances=[Products(f) for f in plan.factors])
+            _direct(products, plan.factors, faces, net, before.largest)
     close(faces, operator, forest or lines(operator), plan.frozen, quantum)
     return Cleaned(faces, method, history, stopped, before, operator.source(faces, net))
 

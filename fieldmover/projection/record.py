@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.forms.fields import FaceFlux, Three
-from fieldmover.forms.measures import near_volumes
+from fieldmover.forms.measures import Conductances, near_volumes
 from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, at
 from fieldmover.projection.operator import Balance
@@ -111,7 +111,7 @@ class Cleaned:
 
 
 def record_of(
-    flux: FaceFlux, done: Cleaned, conductances: Three, regions: Regions, counts: tuple[int, int], started: float
+    flux: FaceFlux, done: Cleaned, conductances: Conductances, regions: Regions, counts: tuple[int, int], started: float
 ) -> Record:
     """The record of what was done to `flux`; `compare` says what conductances and regions are.
 
@@ -139,14 +139,14 @@ def _norms(balance: Balance) -> Norms:
     return Norms(balance.linf, balance.l1, balance.l2)
 
 
-def compare(before: FaceFlux, after: Three, conductances: Three, regions: Regions) -> dict[str, Any]:
+def compare(before: FaceFlux, after: Three, conductances: Conductances, regions: Regions) -> dict[str, Any]:
     """The figures of `Record` on energies and changes.
 
     Parameters
     ----------
     before : FaceFlux
     after : tuple of three ndarrays
-    conductances : tuple of three ndarrays
+    conductances : sequence of three ndarrays or Products
         Metric ones, of all faces.
     regions : mapping of str to bool ndarray, shape (n1, n2, n3)
     """
@@ -195,12 +195,12 @@ def compare(before: FaceFlux, after: Three, conductances: Three, regions: Region
     }
 
 
-def _of_cells(faces: Three, rows: slice) -> list[Array]:
+def _of_cells(faces: Conductances, rows: slice) -> list[Array]:
     """The faces of the cells in rows of axis 1."""
     return [faces[0][rows.start : rows.stop + 1], faces[1][rows], faces[2][rows]]
 
 
-def _weights(grid: Grid, conductances: Three, rows: slice) -> list[Array]:
+def _weights(grid: Grid, conductances: Conductances, rows: slice) -> list[Array]:
     """What turns F^2 into energy of the cell beside it: half the energy for each, in a wall all for one."""
     weights = []
     for axis, g in enumerate(_of_cells(conductances, rows)):

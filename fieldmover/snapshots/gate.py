@@ -13,6 +13,7 @@ import os
 import stat
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -48,6 +49,25 @@ def memory_available() -> int:
     except (OSError, ValueError):
         pass
     return os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES")
+
+
+@dataclass(frozen=True)
+class Item:
+    """A dataset of a file, or a number among its attributes: `path@attribute`.
+
+    Attributes
+    ----------
+    name : str
+    shape : tuple of int
+    type : str
+    refused : str or None
+        Why it is not read.
+    """
+
+    name: str
+    shape: tuple[int, ...]
+    type: str
+    refused: str | None
 
 
 class Snapshot:
@@ -99,6 +119,33 @@ class Snapshot:
     def shape(self, name: str) -> tuple[int, ...]:
         """The shape of a dataset as stored."""
         return tuple(self._dataset(name).shape)
+
+    def size(self, name: str) -> int:
+        """The bytes that the numbers of a dataset take."""
+        dataset = self._dataset(name)
+        return int(math.prod(dataset.shape) * dataset.dtype.itemsize)
+
+    def contents(self) -> list[Item]:
+        """Every dataset of the file, in the order of names, and every number among the attributes.
+
+        Links that lead elsewhere are not followed.
+        """
+        found: list[Item] = []
+
+        def visit(name: str, thing: Any) -> None:
+            path = f"/{name}"
+            if isinstance(thing, hdf5().Dataset):
+                shape = tuple(thing.shape or ())
+                found.append(Item(path, shape, str(thing.dtype), self._refusal(thing)))
+            found.extend(
+                Item(f"{path}@{key}", (), str(kind.dtype), None)
+                for key in thing.attrs
+                if (kind := thing.attrs.get_id(key)).dtype.kind in "fiu" and math.prod(kind.shape) == 1
+            )
+
+        with self._reading("/"):
+            self._file.visititems(visit)
+        return sorted(found, key=lambda item: item.name)
 
     def read(self, name: str, where: Selection = ()) -> NDArray[Any]:
         """The numbers of a dataset (or of a part of it) as stored, in the byte order of this machine."""

@@ -264,7 +264,12 @@ def publish(partial: Path, path: Path, overwrite: bool) -> None:
 
 
 def write_text(path: Path, text: str) -> None:
-    """Replace a small text file as a whole.
+    """Replace a small text file as a whole; errors as `write_bytes`."""
+    write_bytes(path, text.encode())
+
+
+def write_bytes(path: Path, content: bytes) -> None:
+    """Replace a small file as a whole.
 
     Raises
     ------
@@ -273,8 +278,8 @@ def write_text(path: Path, text: str) -> None:
     """
     partial = partial_name(path, os.getpid())
     try:
-        with open(partial, "w", encoding="utf-8") as file:
-            file.write(text)
+        with open(partial, "wb") as file:
+            file.write(content)
             file.flush()
             os.fsync(file.fileno())
         publish(partial, path, overwrite=True)

@@ -1,38 +1,62 @@
 """The projection: direct solves beside Fourier transforms, and a general-purpose algebraic multigrid.
 
 Every case runs in a process of its own, so that its peak memory is its own. The multigrid is PyAMG: Ruge-Stuben
-with conjugate gradients, on the same operator, to the same tolerance.
+with conjugate gradients, on the same operator and right-hand side, to the same tolerance. Its time is that of
+set-up and solution, its memory what these take beside the matrix. Set beside it is the whole of project(): weights,
+set-up, solution, the exact finish and the record; its memory is what it takes beside the flux given.
 """
 
 from __future__ import annotations
 
 import argparse
 import multiprocessing
-import resource
 import statistics
 import time
 from collections.abc import Callable
 from concurrent.futures import ProcessPoolExecutor
+from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 import scipy.sparse
 
 TOLERANCE = 1e-10
+WARPS = {"mild warp": (0.43, 0.21), "strong warp": (0.8, 0.45)}
+
+
+@dataclass
+class Figures:
+    """Seconds, iterations, and memory in arrays of one number per cell."""
+
+    set_up: float
+    solve: float
+    whole: float
+    iterations: int
+    arrays: float
 
 
 def median(work: Callable[[], object], runs: int = 5) -> float:
     """Median seconds, after one run that is not counted."""
-    seconds = []
-    for _ in range(runs + 1):
-        began = time.perf_counter()
-        work()
-        seconds.append(time.perf_counter() - began)
-    return statistics.median(seconds[1:])
+    return statistics.median([seconds(work) for _ in range(runs + 1)][1:])
 
 
-def peak() -> float:
-    """Most memory this process has used so far, in bytes."""
-    return resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024.0
+def seconds(work: Callable[[], object]) -> float:
+    began = time.perf_counter()
+    work()
+    return time.perf_counter() - began
+
+
+def peak(work: Callable[[], object]) -> float:
+    """Most memory that work takes beside what is there before, in bytes (Linux)."""
+
+    def status(name: str) -> int:
+        lines = Path("/proc/self/status").read_text().splitlines()
+        return 1024 * next(int(line.split()[1]) for line in lines if line.startswith(name))
+
+    before = status("VmRSS")
+    Path("/proc/self/clear_refs").write_text("5")  # forgets the peak so far
+    work()
+    return float(status("VmHWM") - before)
 
 
 def box(n: int, periodic: bool = False):
@@ -123,70 +147,100 @@ def direct(n: int, periodic: bool) -> str:
     return f"direct, {kind} box {n}^3: {solve:.4f} s = {solve / transform:.1f} FFT pairs of {transform:.4f} s"
 
 
-def spherical(n: int, around: int) -> str:
-    from fieldmover.forms.measures import face_factors
+def spherical(n: int, around: int, beside: bool) -> str:
+    from fieldmover.forms.measures import face_conductances, face_factors
+    from fieldmover.projection.operator import ProjectionOperator
+    from fieldmover.projection.request import open_walls
     from fieldmover.projection.separable import for_cells
 
     grid = sphere(n, around)
-    solver = for_cells(face_factors(grid), grid.periodic, ((True, True), (False, False), (False, False)))
+    walls = open_walls(grid, "open")
+    solver = for_cells(face_factors(grid), grid.periodic, walls)
     rhs, out = np.random.default_rng(0).normal(size=grid.shape), np.empty(grid.shape)
-    return f"direct, sphere {grid.shape}: {median(lambda: solver.solve(rhs, out)):.4f} s"
+    solve = median(lambda: solver.solve(rhs, out))
+    line = f"direct, sphere {grid.shape}: {solve:.4f} s"
+    if beside:
+        operator = ProjectionOperator(face_conductances(grid), np.ones(grid.shape, dtype=bool), grid.periodic, walls)
+        other = multigrid_on(assembled(operator), rhs.ravel())
+        line += (
+            f"; multigrid {other.whole:.2f} s, {other.iterations} iterations, {other.whole / solve:.0f} times as long"
+        )
+    return line
 
 
-def iterations(name: str, n: int) -> str:
+def case(name: str, n: int):
+    """The flux of an iterative case, and the arguments of `project`."""
     import fieldmover as fm
 
-    grid = {
-        "strong warp": lambda: warped_sphere(n, 0.8, 0.45),
-        "mild warp": lambda: warped_sphere(n, 0.43, 0.21),
-    }.get(name, lambda: sphere(n, n))()
-    flux, arguments = noise(grid), {}
+    grid = warped_sphere(n, *WARPS[name]) if name in WARPS else sphere(n, n)
+    flux = noise(grid)
+    if name in WARPS:
+        return flux, {}
     if name == "excised ball":
-        arguments = {"excised": ball(grid)}
-    elif name == "frozen ball":
-        inside, _ = fm.project(flux)  # what is frozen must have no divergence of its own
-        frozen = faces_of(grid, ball(grid))
-        flux = fm.FaceFlux(
-            grid, tuple(np.where(m, a, b) for m, a, b in zip(frozen, inside.faces, flux.faces, strict=True))
-        )
-        arguments = {"frozen": frozen}
-    elif name == "fill of a ball":
-        inside, _ = fm.project(flux)
-        free = faces_of(grid, ball(grid))
-        flux = fm.FaceFlux(grid, tuple(np.where(m, 0.0, a) for m, a in zip(free, inside.faces, strict=True)))
-        arguments = {"frozen": [~m for m in free]}
-    fm.project(noise(sphere(8, 8)))
-    before = peak()
-    clean, record = fm.project(flux, tolerance=TOLERANCE, **arguments)
-    arrays = (peak() - before) / (8.0 * grid.cell_volumes().size)
-    net = float(np.abs(fm.divergence(clean).cells).max()) if name != "excised ball" else record.divergence_after.linf
-    return (
-        f"{name}, {n}^3: {record.iterations} iterations, {record.seconds:.2f} s in all, {arrays:.1f} arrays of memory, "
-        f"largest net flux left {net:.1g}"
-    )
+        return flux, {"excised": ball(grid)}
+    inside, _ = fm.project(flux)  # what is frozen must have no divergence of its own
+    faces = faces_of(grid, ball(grid))
+    new, held = (flux.faces, faces) if name == "frozen ball" else ([np.zeros_like(f) for f in flux.faces], None)
+    held = held or [~m for m in faces]
+    mixed = tuple(np.where(m, a, b) for m, a, b in zip(held, inside.faces, new, strict=True))
+    return fm.FaceFlux(grid, mixed), {"frozen": held}
 
 
-def multigrid(name: str, n: int, around: int) -> str:
+def iterations(name: str, n: int, runs: int) -> Figures:
+    import fieldmover as fm
+    from fieldmover.projection.conjugate import conjugate_gradients
+    from fieldmover.projection.nearest import Preconditioner
+    from fieldmover.projection.plan import make_plan
+
+    fm.project(noise(warped_sphere(8, 0.43, 0.21)))  # compiles
+    flux, arguments = case(name, n)
+    found: list = []
+    arrays = peak(lambda: found.append(fm.project(flux, tolerance=TOLERANCE, **arguments))) / (8.0 * n**3)
+    record = found.pop()[1]
+    wholes = [seconds(lambda: fm.project(flux, tolerance=TOLERANCE, **arguments)) for _ in range(runs)]
+
+    def set_up() -> None:
+        plan = make_plan(flux, "open", None, arguments.get("frozen"), arguments.get("excised"), "neutral")
+        found[:] = [plan.operator, Preconditioner(plan.operator, plan.factors, plan.scale, plan.weakened)]
+
+    set_ups, solves = [], []
+    for _ in range(runs):
+        set_ups.append(seconds(set_up))
+        net = np.empty(flux.grid.shape)
+        found[0].source(flux.faces, net)
+        solves.append(seconds(lambda net=net: conjugate_gradients(found[0].apply, found[1], net, TOLERANCE)))
+    return Figures(
+        statistics.median(set_ups), statistics.median(solves), statistics.median([*wholes, record.seconds]),
+        record.iterations, arrays,
+    )  # fmt: skip
+
+
+def multigrid(name: str, n: int) -> Figures:
+    from fieldmover.projection.plan import make_plan
+
+    flux, _ = case(name, n)
+    operator = make_plan(flux, "open", None, None, None, "free").operator
+    rhs = np.empty(flux.grid.shape)
+    operator.source(flux.faces, rhs)
+    return multigrid_on(assembled(operator), rhs.ravel())
+
+
+def multigrid_on(matrix: scipy.sparse.csr_matrix, rhs: np.ndarray) -> Figures:
     import pyamg
 
-    from fieldmover.forms.measures import face_conductances
-    from fieldmover.projection.operator import ProjectionOperator
-    from fieldmover.projection.request import open_walls
-
-    grid = {"strong warp": lambda: warped_sphere(n, 0.8, 0.45), "sphere": lambda: sphere(n, around)}[name]()
-    everywhere = np.ones(grid.shape, dtype=bool)
-    matrix = assembled(ProjectionOperator(face_conductances(grid), everywhere, grid.periodic, open_walls(grid, "open")))
-    rhs = np.random.default_rng(0).normal(size=matrix.shape[0])
-    before, began = peak(), time.perf_counter()
-    solver = pyamg.ruge_stuben_solver(matrix)
-    ready = time.perf_counter()
+    times: list[float] = []
     residuals: list[float] = []
-    solver.solve(rhs, tol=TOLERANCE, accel="cg", residuals=residuals, maxiter=200)
-    done = time.perf_counter()
-    return (
-        f"multigrid, {name} {grid.shape}: set-up {ready - began:.2f} s, {len(residuals) - 1} iterations "
-        f"{done - ready:.2f} s, {(peak() - before) / (8.0 * rhs.size):.1f} arrays of memory beside the matrix"
-    )
+
+    def work() -> None:
+        times.append(time.perf_counter())
+        solver = pyamg.ruge_stuben_solver(matrix)
+        times.append(time.perf_counter())
+        solver.solve(rhs, tol=TOLERANCE, accel="cg", residuals=residuals, maxiter=200)
+        times.append(time.perf_counter())
+
+    arrays = peak(work) / (8.0 * rhs.size)
+    start, ready, done = times
+    return Figures(ready - start, done - ready, done - start, len(residuals) - 1, arrays)
 
 
 def assembled(operator) -> scipy.sparse.csr_matrix:
@@ -219,21 +273,36 @@ def run(arguments: list[str]) -> None:
     parser = argparse.ArgumentParser(prog="scripts/bench projection", description=__doc__)
     parser.add_argument("--cells", type=int, nargs="+", default=[64, 128], help="of the iterative cases")
     parser.add_argument("--direct", type=int, nargs="+", default=[128, 256], help="of the direct cases")
-    parser.add_argument(
-        "--large", type=int, help="also project a mildly warped sphere of so many cells along each axis"
-    )
+    parser.add_argument("--runs", type=int, default=3, help="of each iterative case; the median counts")
+    parser.add_argument("--large", type=int, help="also a mildly warped sphere of so many cells along each axis")
     parser.add_argument("--no-multigrid", action="store_true")
     chosen = parser.parse_args(arguments)
-    work: list[tuple] = [(direct, n, periodic) for n in chosen.direct for periodic in (False, True)]
-    work.append((spherical, max(chosen.cells), 2 * max(chosen.cells)))
-    for name in ("mild warp", "strong warp", "excised ball", "frozen ball", "fill of a ball"):
-        work += [(iterations, name, n) for n in chosen.cells]
-    if not chosen.no_multigrid:
-        work.append((multigrid, "sphere", max(chosen.cells), 2 * max(chosen.cells)))
-        work.append((multigrid, "strong warp", max(chosen.cells), max(chosen.cells)))
-    if chosen.large:
-        work.append((iterations, "mild warp", chosen.large))
     spawn = multiprocessing.get_context("spawn")
+    largest = max(chosen.cells)
     with ProcessPoolExecutor(1, mp_context=spawn, max_tasks_per_child=1) as pool:
-        for function, *values in work:
-            print(pool.submit(function, *values).result(), flush=True)
+
+        def apart(function, *values):
+            return pool.submit(function, *values).result()
+
+        for n in chosen.direct:
+            for periodic in (False, True):
+                print(apart(direct, n, periodic), flush=True)
+        print(apart(spherical, largest, 2 * largest, not chosen.no_multigrid), flush=True)
+        cases = [(name, n, chosen.runs) for name in (*WARPS, "excised ball", "frozen ball", "fill of a ball")
+                 for n in chosen.cells]  # fmt: skip
+        cases += [("mild warp", chosen.large, 1)] if chosen.large else []
+        for name, n, runs in cases:
+            own = apart(iterations, name, n, runs)
+            print(
+                f"{name}, {n}^3: {own.iterations} iterations; set-up {own.set_up:.2f} s, solution {own.solve:.2f} s, "
+                f"project() {own.whole:.2f} s, {own.arrays:.1f} arrays",
+                flush=True,
+            )
+            if name in WARPS and n == largest and not chosen.no_multigrid:
+                other = apart(multigrid, name, n)
+                print(
+                    f"    multigrid: {other.iterations} iterations; set-up {other.set_up:.2f} s, solution "
+                    f"{other.solve:.2f} s, {other.arrays:.1f} arrays; project() takes {own.whole / other.whole:.2f} of "
+                    f"its time, {own.arrays / other.arrays:.2f} of its memory",
+                    flush=True,
+                )

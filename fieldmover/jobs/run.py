@@ -1,0 +1,331 @@
+"""The commands, each one straight line through the layers."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+import fieldmover as fm
+from fieldmover.diagnostics import cell_energies, closed_walls, relative_divergence
+from fieldmover.errors import DataError, JobError
+from fieldmover.forms.fields import CellContent, FaceFlux
+from fieldmover.grids.grid import Grid
+from fieldmover.interpolation.fluid import FluidPlan
+from fieldmover.jobs.details import divergences, profile, spectra
+from fieldmover.jobs.fluid import move_fluid, totals
+from fieldmover.jobs.load import Loaded
+from fieldmover.jobs.progress import Progress
+from fieldmover.jobs.read import State, read_source, read_target, target_grid
+from fieldmover.jobs.record import Record
+from fieldmover.jobs.regions import Cells, Mask, region_figures, region_masks
+from fieldmover.jobs.store import Store, bytes_needed
+from fieldmover.jobs.supervise import note
+from fieldmover.jobs.verdicts import limits_table
+from fieldmover.jobs.warm import compiling_fluid
+from fieldmover.projection.project import project
+from fieldmover.report.figures import Plane, pictures
+from fieldmover.report.formats import to_json
+from fieldmover.report.text import terminal
+from fieldmover.report.write import check_folder, make_folder, write_report
+from fieldmover.snapshots.viewable import sidecar
+from fieldmover.snapshots.write import Output, check_space, write_text
+
+Array = NDArray[np.float64]
+
+CLEAN_ENOUGH = 1e-12
+"""Relative divergence that needs no cleaning."""
+CHARGE = 1e-2
+"""Part of the flux through a closed inner wall that may be net; more is no error of discretisation."""
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What a command found: its exit status and the text for stdout."""
+
+    exit_status: int
+    text: str
+
+
+@dataclass
+class Work:
+    """What a command carries along: the job, what it found, where its report goes, what it looks at."""
+
+    loaded: Loaded
+    record: Record
+    progress: Progress
+    folder: Path
+    planes: list[Plane]
+    regions: dict[str, Mask]
+
+
+def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False) -> Outcome:
+    """The whole hand-over: read, clean if needed, move, fill, write, report.
+
+    Parameters
+    ----------
+    loaded : Loaded
+        The job.
+    folder : Path, optional
+        Where the report goes (default: NAME-report beside the output).
+    overwrite : bool
+        Whether an output that exists is replaced.
+    quiet : bool
+        Whether to show no progress.
+
+    Raises
+    ------
+    JobError
+        If the job cannot be carried out as written: the output exists or is the input, the target grid is
+        none, a region or a plane of the report misses it.
+    DataError, OutputError, NotConverged, NotEnoughMemory
+        See `fieldmover.errors`.
+    """
+    target = target_grid(loaded)
+    check_output(loaded, overwrite)
+    check_space(loaded.target, bytes_needed(loaded, target.shape))
+    work = _work(loaded, "move", target, folder, Progress(7, quiet))
+    job, record, progress = loaded.job, work.record, work.progress
+    with compiling_fluid():
+        with progress.stage("reading"):
+            source = _source(loaded, record)
+        with progress.stage("cleaning"):
+            clean_flux = _cleaned(loaded, source, record, job.move.clean)
+        with progress.stage("moving the field"):
+            flux = fm.move_flux(clean_flux, target, order=job.move.order, outside=job.move.outside)
+            record.field("moved", flux)
+    with progress.stage("moving the fluid"):
+        plan = FluidPlan(source.grid, target)
+        moved = State(loaded.target, flux, move_fluid(job, source, plan), source.time)
+    return _store(work, source, moved, plan, {"cleaned": clean_flux, "moved": flux}, overwrite)
+
+
+def clean(
+    loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False
+) -> Outcome:
+    """Remove monopoles and write the field on the grid it was read on, with the fluid as it was.
+
+    Parameters
+    ----------
+    loaded, folder, overwrite, quiet
+        As in `move`. The job has no target.grid.
+
+    Raises
+    ------
+    JobError
+        If the job gives a target grid, or as in `move`.
+    DataError, OutputError, NotConverged, NotEnoughMemory
+        See `fieldmover.errors`.
+    """
+    job = loaded.job
+    if job.target.grid is not None:
+        raise JobError(
+            f"{loaded.path}: target.grid: clean keeps the grid of the source; leave this table out"
+        )
+    check_output(loaded, overwrite)
+    check_folder(folder or report_folder(loaded))
+    progress, record = Progress(5, quiet), Record(loaded, "clean")
+    with progress.stage("reading"):
+        source = _source(loaded, record)
+        work = _work(loaded, "clean", source.grid, folder, progress, record)
+        check_space(loaded.target, bytes_needed(loaded, source.grid.shape))
+    with progress.stage("cleaning"):
+        flux = _cleaned(loaded, source, record, "always")
+        plan = FluidPlan(source.grid, source.grid)
+        fluid = {name: source.fluid[name] for name in job.target.fluid}
+        cleaned = State(loaded.target, flux, fluid, source.time)
+    return _store(work, source, cleaned, plan, {"cleaned": flux}, overwrite)
+
+
+def check(
+    loaded: Loaded,
+    folder: Path | None = None,
+    quiet: bool = False,
+    make_limits: float | None = None,
+    against: Path | None = None,
+) -> Outcome:
+    """Measure the files of a job against its limits; nothing but the report is written.
+
+    The target's file is measured and compared with the source; where there is none yet, the source alone.
+
+    Parameters
+    ----------
+    loaded, folder, quiet
+        As in `move`.
+    make_limits : float, optional
+        Write limits.toml beside the report: limits that these files keep with that margin, relative.
+    against : Path, optional
+        A file laid out like the target, of an earlier run say, to compare it with.
+
+    Raises
+    ------
+    JobError
+        If there is no target to compare with the other file.
+    DataError, OutputError
+        See `fieldmover.errors`.
+    """
+    folder = folder or report_folder(loaded, "check")
+    check_folder(folder)
+    there = loaded.target.exists()
+    if against is not None and not there:
+        raise JobError(f"{loaded.target}: no such file; there is nothing to compare with {against}")
+    progress, record = Progress(3, quiet), Record(loaded, "check")
+    with progress.stage("reading"):
+        source = _source(loaded, record)
+        grid = source.grid if loaded.job.target.grid is None else target_grid(loaded)
+        stored = read_target(loaded, grid) if there else source
+        if there:
+            record.file("target", loaded.target)
+    work = _work(loaded, "check", stored.grid, folder, progress, record)
+    with progress.stage("measuring"):
+        if there:
+            record.field("stored", stored.flux)
+            _compare(work, source, stored, FluidPlan(source.grid, stored.grid), {})
+        if against is not None:
+            record.file("other", against)
+            record.against(read_target(loaded, grid, against).flux, stored.flux)
+    outcome = _finish(work, source, stored if there else None)
+    if make_limits is None:
+        return outcome
+    path = folder / "limits.toml"
+    report = os.path.relpath(folder / "report.json", loaded.path.parent)  # as a job names files
+    write_text(path, limits_table(record.values, record.names, make_limits, report))
+    return replace(outcome, text=f"{outcome.text}\nlimits: {path}")
+
+
+def report_folder(loaded: Loaded, suffix: str = "report") -> Path:
+    """Where the report of a command goes unless told otherwise."""
+    return loaded.target.with_name(f"{loaded.target.stem}-{suffix}")
+
+
+def check_output(loaded: Loaded, overwrite: bool) -> None:
+    """Refuse to lose a file before anything is read."""
+    source, target = loaded.source, loaded.target
+    for path in (target, sidecar(target)) if loaded.job.target.view else (target,):
+        if path.exists():
+            if source.exists() and path.samefile(source):
+                raise JobError(f"{path}: the output is the input")
+            if not overwrite:
+                raise JobError(f"{path}: exists; give --overwrite to replace it")
+            if not path.is_file():
+                raise JobError(f"{path}: is not a file")
+    if not target.parent.is_dir():
+        raise JobError(f"{target}: there is no folder {str(target.parent)!r} to write it into")
+
+
+def _work(
+    loaded: Loaded,
+    command: str,
+    grid: Grid,
+    folder: Path | None,
+    progress: Progress,
+    record: Record | None = None,
+) -> Work:
+    """What the job wants to see on a grid; mistakes in it are told before the work."""
+    folder = folder or report_folder(loaded)
+    check_folder(folder)
+    return Work(
+        loaded, record or Record(loaded, command), progress, folder, _planes(loaded, grid),
+        region_masks(grid, loaded.job.regions),
+    )  # fmt: skip
+
+
+def _planes(loaded: Loaded, grid: Grid) -> list[Plane]:
+    given = loaded.job.report.planes
+    if given is None:
+        return [Plane.through(grid, 1), Plane.through(grid, 2)]
+    return [Plane.through(grid, axis, position) for axis, position in given]
+
+
+def _source(loaded: Loaded, record: Record) -> State:
+    source = read_source(loaded)
+    record.file("source", loaded.source)
+    record.values["time"] = source.time
+    record.field("source", source.flux)
+    return source
+
+
+def _cleaned(loaded: Loaded, source: State, record: Record, wanted: str) -> FaceFlux:
+    """The field without monopoles; a hole in the grid may not hide a real one."""
+    divergence = record.values["fields"]["source"]["divergence"]["linf"]
+    flux = source.flux
+    if not (wanted == "never" or (wanted == "when needed" and divergence <= CLEAN_ENOUGH)):
+        inner, _ = closed_walls(flux)
+        if inner is not None and abs(inner.net) > CHARGE * inner.gross:
+            raise DataError(
+                f"{source.path}: net magnetic flux {inner.net:.6g} through the closed inner wall, "
+                f"{abs(inner.net) / inner.gross:.2g} of all that passes it; a field without monopoles has none"
+            )
+        flux, found = project(flux)
+        record.cleaning(found.as_dict())
+    record.field("cleaned", flux)
+    return flux
+
+
+def _store(
+    work: Work, source: State, moved: State, plan: FluidPlan, steps: dict[str, FaceFlux], overwrite: bool
+) -> Outcome:
+    """Write the target, measure what was written, and report."""
+    loaded, record, progress = work.loaded, work.record, work.progress
+    with Output(loaded.target, overwrite, bytes_needed(loaded, moved.grid.shape)) as output:
+        note(output.partial)
+        store = Store(loaded, output)
+        with progress.stage("writing"):
+            store.write_state(moved)
+        with progress.stage("measuring"):
+            stored = store.read_state(moved)
+            record.field("stored", stored.flux)
+            _compare(work, source, stored, plan, steps)
+            record.finish(progress)
+        store.write_report(to_json(record.values))
+        make_folder(work.folder)
+        output.publish()
+    store.publish_view(moved)
+    record.file("target", loaded.target)
+    return _finish(work, source, stored)
+
+
+def _compare(work: Work, source: State, stored: State, plan: FluidPlan, steps: dict[str, FaceFlux]) -> None:
+    """Energy over the part that the source covers, step by step; regions; totals of the fluid."""
+    record, whole = work.record, plan.coverage >= 1.0
+    volumes = stored.grid.cell_volumes()
+    record.coverage(plan.coverage, volumes)
+    cells, energies = {}, {}
+    for name, flux in {"source": source.flux, **steps, "stored": stored.flux}.items():
+        found = cell_energies(flux)
+        if flux.grid is source.grid and flux.grid is not stored.grid:
+            found = plan.move(CellContent(source.grid, found)).cells
+        energies[name] = float(found[whole].sum())
+        if name in ("source", "stored"):
+            cells[name] = found
+    record.energies(energies)
+    record.values["profile"] = profile(
+        stored.grid, {step: np.where(whole, e, 0.0) for step, e in cells.items()}
+    )
+    if work.regions:
+        figures = Cells(relative_divergence(stored.flux), cells["stored"], cells["source"], whole, volumes)
+        record.values["regions"] = {
+            name: region_figures(figures, mask) for name, mask in work.regions.items()
+        }
+    record.fluid(totals(work.loaded.job, source, plan, stored.fluid))
+
+
+def _finish(work: Work, source: State, stored: State | None) -> Outcome:
+    """Draw, write the report, and say how it ended."""
+    record, progress = work.record, work.progress
+    states = {"source": source} if stored is None else {"source": source, "stored": stored}
+    with progress.stage("drawing"):
+        fields = {step: fm.cells_from_flux(state.flux, basis="cartesian") for step, state in states.items()}
+        sides = [(fields[step], relative_divergence(state.flux)) for step, state in states.items()]
+        shown = pictures(work.planes, [state.grid for state in states.values()], sides)
+        record.pictures(shown)
+        record.values["divergences"] = divergences({step: state.flux for step, state in states.items()})
+        record.values["spectra"] = spectra(
+            {step: (state.grid, fields[step]) for step, state in states.items()}
+        )
+    record.finish(progress)
+    path = write_report(work.folder, record.values, shown)
+    return Outcome(3 if record.exceeded else 0, f"{terminal(record.values)}\nreport: {path}")

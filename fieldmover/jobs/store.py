@@ -1,0 +1,124 @@
+"""From fields on the target grid to the file that the receiving code reads."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fieldmover import __version__, cells_from_flux
+from fieldmover.conventions import components
+from fieldmover.conventions.units import size_of
+from fieldmover.diagnostics import relative_divergence
+from fieldmover.jobs.load import Loaded
+from fieldmover.jobs.read import State, flux_from_stored
+from fieldmover.snapshots.layout import Layout
+from fieldmover.snapshots.viewable import sidecar, write_view, xdmf
+from fieldmover.snapshots.write import Output, write_text
+
+Array = NDArray[np.float64]
+
+OWN = "/fieldmover"
+"""Our own group in an output: nodes, the job and the report."""
+
+
+class Store:
+    """Writes the state of the target into an open output, and reads it back.
+
+    Parameters
+    ----------
+    loaded : Loaded
+        Tells names, axis order, unit and precision.
+    output : Output
+    """
+
+    def __init__(self, loaded: Loaded, output: Output) -> None:
+        self.loaded = loaded
+        self._target = loaded.job.target
+        self._output = output
+        self._layout = Layout(self._target.axes)
+        self._type = np.float32 if self._target.precision == "single" else np.float64
+
+    def write_state(self, state: State) -> None:
+        """Magnetic field and fluid, and our own nodes and job text."""
+        magnetic = self._target.magnetic
+        basis = magnetic.basis or "physical"
+        if magnetic.at == "faces":
+            arrays = components.faces_from_flux(state.flux, basis, magnetic.densitised)
+        else:
+            cells = cells_from_flux(state.flux, basis=basis)
+            scale = components.cell_density(state.grid) if magnetic.densitised else 1.0
+            arrays = (cells[0] * scale, cells[1] * scale, cells[2] * scale)
+        unit = size_of(magnetic.unit)
+        units = magnetic.unit if isinstance(magnetic.unit, str) else f"{unit!r} Heaviside-Lorentz"
+        for name, array, axis in zip(magnetic.data, arrays, (1, 2, 3), strict=True):
+            where = f"faces normal to q{axis}" if magnetic.at == "faces" else "cells"
+            self._write(name, array / unit, where, units)
+        for name, quantity in self._target.fluid.items():
+            values = state.fluid[name]
+            if isinstance(quantity.data, str):
+                self._write(quantity.data, values, "cells", "as in the source")
+            else:
+                parts = components.from_cartesian(state.grid, values, quantity.basis or "physical")
+                for dataset, part in zip(quantity.data, parts, strict=True):
+                    self._write(dataset, part, "cells", "as in the source")
+        for axis, nodes in enumerate(state.grid.nodes, start=1):
+            self._output.write(f"{OWN}/nodes/q{axis}", np.array(nodes), {"kind": state.grid.kind})
+        self._text("job", self.loaded.text)
+        if self._target.view:
+            write_view(self._output, f"{OWN}/view", state.grid, _viewed(state))
+
+    def publish_view(self, state: State) -> None:
+        """The XDMF file beside the output, if the job asks for it; the output has its name by then."""
+        if self._target.view:
+            path = self._output.path
+            text = xdmf(path.name, f"{OWN}/view", state.grid, _viewed(state), state.time or 0.0)
+            write_text(sidecar(path), text)
+
+    def read_state(self, state: State) -> State:
+        """What the file now holds, storing errors included: the field and the scalars of the fluid."""
+        magnetic = self._target.magnetic
+        a, b, c = (self._read(name) for name in magnetic.data)
+        scalars = {name: q.data for name, q in self._target.fluid.items() if isinstance(q.data, str)}
+        return State(
+            state.path,
+            flux_from_stored(state.grid, (a, b, c), magnetic, magnetic.at),
+            {name: self._read(dataset) for name, dataset in scalars.items()},
+            state.time,
+        )
+
+    def write_report(self, text: str) -> None:
+        """The report beside the data it speaks of."""
+        self._text("report", text)
+
+    def _read(self, name: str) -> Array:
+        return np.ascontiguousarray(self._layout.inside(self._output.read(name)), dtype=np.float64)
+
+    def _write(self, name: str, array: Array, location: str, units: str) -> None:
+        stored = np.ascontiguousarray(self._layout.outside(array), dtype=self._type)
+        attributes = {"units": units, "location": location, "axis_order": self._target.axes}
+        self._output.write(name, stored, attributes)
+
+    def _text(self, name: str, text: str) -> None:
+        data = np.frombuffer(text.encode(), dtype=np.uint8)
+        self._output.write(f"{OWN}/{name}", data, {"content": "UTF-8 text", "version": __version__})
+
+
+def _viewed(state: State) -> dict[str, Array]:
+    """What viewers see: mean fields of cells, Heaviside-Lorentz, where divergence sits, and the fluid."""
+    field = {"magnetic field": cells_from_flux(state.flux, basis="cartesian")}
+    return {**field, "divergence": relative_divergence(state.flux), **state.fluid}
+
+
+def bytes_needed(loaded: Loaded, shape: tuple[int, int, int]) -> int:
+    """What the arrays of an output take, roughly, for a grid of so many cells along each axis."""
+    target = loaded.job.target
+    arrays = 3 + sum(1 if isinstance(quantity.data, str) else 3 for quantity in target.fluid.values())
+    view = 4 * (arrays + 1) + (0 if _is_box(loaded) else 24) if target.view else 0
+    return int(1.1 * math.prod(shape) * (arrays * (4 if target.precision == "single" else 8) + view))
+
+
+def _is_box(loaded: Loaded) -> bool:
+    """Whether the target is a Cartesian grid, whose view needs no position of every node."""
+    return (loaded.job.target.grid or loaded.job.source.grid).kind == "cartesian"
