@@ -191,7 +191,7 @@ def test_all_mistakes_are_told_at_once_with_their_lines(told):
         ('time = "/state@time"', 'axes = "q3 q2"', "source.axes: found 'q3 q2'; expected"),
         ('time = "/state@time"', "ghosts = [1, -1, 0]", "source.ghosts[1]: found -1"),
         ("[limits]", "[limit]", "line 35: limit: unknown key (did you mean 'limits'?)"),
-        ("[limits]", "[move]\norder = 2\n[limits]", "line 36: move.order: found 2; expected 1, 3 or 5"),
+        ("[limits]", "[move]\norder = 2\n[limits]", "line 36: move.order: found 2; expected 1, 3, 5 or 'limited'"),
     ],
 )
 def test_each_mistake_in_plain_words(told, old, new, words):
