@@ -108,7 +108,8 @@ def test_a_hand_over(place, capsys):
         "ring.toml",
     ]
     files = os.listdir(place.report)
-    assert sorted(f for f in files if not f.endswith(".png")) == ["report.html", "report.json", "report.xml", "summary.md"]
+    words = sorted(f for f in files if not f.endswith(".png"))
+    assert words == ["report.html", "report.json", "report.xml", "summary.md"]
     assert {"b-source-y-0.png", "b-target-as-stored-y-0.png", "divergence-source-y-0.png"} <= set(files)
 
     report = place.figures()

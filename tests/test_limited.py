@@ -1,7 +1,7 @@
 """Sharp fields: what `order="limited"` promises beside orders 1 and 3.
 
-The sheet is a triangle wave of the potential, |B| = 1 with the direction reversed from stripe to stripe: a current sheet
-as in textbooks (common practice, no source). The bounds are those of Zalesak (1979), no new extrema, with the
+The sheet is a triangle wave of the potential, |B| = 1 with the direction reversed from stripe to stripe: a current
+sheet as in textbooks (common practice, no source). The bounds are those of Zalesak (1979), no new extrema, with the
 round-off of 2 % that cell averages of two components need.
 """
 

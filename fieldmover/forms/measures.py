@@ -225,54 +225,6 @@ def edge_factors(grid: Grid) -> Factors | None:
     return None
 
 
-def edge_weights(grid: Grid) -> Three:
-    """Weights of all edges, dual area / edge length, unit L; 0 on collapsed edges.
-
-    On warped grids the dual area is a quarter of the volumes of the (up to four) cells round the edge, divided by
-    the edge length.
-
-    Parameters
-    ----------
-    grid : Grid
-
-    Returns
-    -------
-    tuple of three ndarrays
-        Shapes of the edges. Edges that coincide on a pole share its weight; the last edge along a seam has the
-        weight of the first.
-    """
-    factors = edge_factors(grid)
-    if factors is not None:
-        return outer(factors[0]), outer(factors[1]), outer(factors[2])
-    x, volume = grid.node_positions(), grid.cell_volumes()
-    result = []
-    for axis in range(3):
-        length = np.sqrt((np.diff(x, axis=axis + 1) ** 2).sum(axis=0))
-        share = volume
-        for d in range(3):
-            if d != axis:
-                share = _half_to_both_sides(share, d, grid.periodic[d])
-        weight = np.divide(share, length**2, out=np.zeros_like(length), where=length > 1e-9 * length.max())
-        result.append(weight)
-    for axis, ring in enumerate(grid.ring_axis):
-        for end in grid.pole_ends(axis):
-            if ring is not None:
-                result[ring][at(axis, end)] = 0.0
-    return result[0], result[1], result[2]
-
-
-def _half_to_both_sides(cells: Array, axis: int, periodic: bool) -> Array:
-    """Give half of each value to the node before and the node after it along `axis`."""
-    shape = list(cells.shape)
-    shape[axis] += 1
-    out = np.zeros(shape)
-    out[at(axis, slice(None, -1))] += 0.5 * cells
-    out[at(axis, slice(1, None))] += 0.5 * cells
-    if periodic:
-        out[at(axis, 0)] = out[at(axis, -1)] = out[at(axis, 0)] + out[at(axis, -1)]
-    return out
-
-
 def _dual_nodes(grid: Grid, axis: int) -> Array:
     """Cell centres with the two walls: the ends of the dual cells of an axis without seam."""
     nodes = grid.nodes[axis]

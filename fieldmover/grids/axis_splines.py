@@ -280,7 +280,7 @@ def _line_fit(
     border = np.ascontiguousarray(matrix[:inner, inner:])
     _banded_solve(lower, upper, border)
     border_row = np.ascontiguousarray(matrix[inner:, :inner])
-    corner = np.linalg.inv(matrix[inner:, inner:] - border_row @ border)
+    corner = np.asarray(np.linalg.inv(matrix[inner:, inner:] - border_row @ border), dtype=np.float64)
     take = np.arange(*stored)
     take = (take - centre) % size if cyclic else take
     take = np.append(take, np.full(padding, -1))

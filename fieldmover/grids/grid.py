@@ -17,7 +17,7 @@ from fieldmover.grids.maps import CartesianMap, CylindricalMap, Map, SphericalMa
 
 Array = NDArray[np.float64]
 
-_GAUSS3 = ((-np.sqrt(0.6), 5 / 9), (0.0, 8 / 9), (np.sqrt(0.6), 5 / 9))
+_GAUSS3 = ((-(0.6**0.5), 5 / 9), (0.0, 8 / 9), (0.6**0.5, 5 / 9))
 _SLAB = 1 << 18  # cells whose positions are in memory at a time
 
 
@@ -163,7 +163,7 @@ class Grid:
         if factors is not None:
             return outer(factors)
         volume = np.zeros(self.shape)
-        points = [(f, g, h) for f in _GAUSS3 for g in _GAUSS3 for h in _GAUSS3]
+        points: list[tuple[tuple[float, float], ...]] = [(f, g, h) for f in _GAUSS3 for g in _GAUSS3 for h in _GAUSS3]
         for rows, q, weight in quadrature(self, [0, 1, 2], points):
             j = self.map.jacobian(*_open(*q))
             volume[rows] += np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0)) * weight

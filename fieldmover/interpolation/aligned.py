@@ -78,12 +78,11 @@ def _integrals_over(spline: AxisSpline, q: Array, source: Grid, axis: int) -> Ar
     cuts = cuts[(cuts > q[0]) & (cuts < q[-1])]
     ends = np.union1d(q, cuts)
     half, middle = 0.5 * np.diff(ends), 0.5 * (ends[1:] + ends[:-1])
-    parts = sum(
+    points = [
         weight * half[:, None] * _matrix(spline.nodes, spline.cell_pieces, spline.cell_first, middle + abscissa * half)
         for abscissa, weight in zip(*_GAUSS, strict=True)
-    )
-    first = np.searchsorted(ends, q)
-    return np.add.reduceat(np.vstack([parts, np.zeros((1, parts.shape[1]))]), first[:-1], axis=0)
+    ]
+    return np.add.reduceat(np.sum(points, axis=0), np.searchsorted(ends, q[:-1]), axis=0)
 
 
 def _matrix(nodes: Array, pieces: Array, first: NDArray[np.int64], q: Array) -> Array:

@@ -20,7 +20,8 @@ def compiling_fluid() -> Iterator[subprocess.Popen[bytes] | None]:
     if not compute.cache_lacks("fluid"):
         yield None
         return
-    process = subprocess.Popen([sys.executable, "-m", "fieldmover.jobs.warm"], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
+    command = [sys.executable, "-m", "fieldmover.jobs.warm"]
+    process = subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
     try:
         yield process
         process.wait()
@@ -37,7 +38,8 @@ def _compile() -> None:
     from fieldmover.interpolation.fluid import FluidPlan
 
     sphere = fm.spherical_grid(np.geomspace(1, 3, 9), np.linspace(0, np.pi, 9), np.linspace(0, 2 * np.pi, 17))
-    box = fm.cartesian_grid(*[np.linspace(-2.5, 2.5, 9)] * 3)
+    x = np.linspace(-2.5, 2.5, 9)
+    box = fm.cartesian_grid(x, x, x)
     mass = fm.CellContent(sphere, sphere.cell_volumes())
     FluidPlan(sphere, box).move_by_mass(mass, np.ones((1, *sphere.shape)))
     fm.diagnose(fm.flux_from_function(box, lambda x, y, z: (y, z, x)))

@@ -36,9 +36,10 @@ def potential(flux: FaceFlux, gauge: Gauge = "smooth") -> EdgePotential:
         Divergence-free to round-off.
     gauge : {"smooth", "axial", "none"}
         "smooth": least sum of w a^2 with w = dual area / edge length, the discrete form of div A = 0 with no A
-        through the walls. "axial": no component along the first axis without seam and poles, x or r (DeVore 2000,
-        Magnetic helicity generation by solar differential rotation, has z), smooth in the surface where that
-        begins; along a seam, where all axes have one, as little as there can be. "none": as running sums leave it.
+        through the walls; on warped grids with the w of a plain one with the same poles and seams. "axial": no
+        component along the first axis without seam and poles, x or r (DeVore 2000, Magnetic helicity generation by
+        solar differential rotation, has z), smooth in the surface where that begins; along a seam, where all axes
+        have one, as little as there can be. "none": as running sums leave it.
 
     Returns
     -------

@@ -197,7 +197,7 @@ def iterations(name: str, n: int, runs: int) -> Figures:
     found: list = []
     arrays = peak(lambda: found.append(fm.project(flux, tolerance=TOLERANCE, **arguments))) / (8.0 * n**3)
     record = found.pop()[1]
-    wholes = [seconds(lambda: fm.project(flux, tolerance=TOLERANCE, **arguments)) for _ in range(runs)]
+    wholes = [seconds(lambda: fm.project(flux, tolerance=TOLERANCE, **arguments)) for _ in range(runs - 1)]
 
     def set_up() -> None:
         plan = make_plan(flux, "open", None, arguments.get("frozen"), arguments.get("excised"), "neutral")
