@@ -25,6 +25,7 @@ from fieldmover.interpolation.evaluate import PotentialSpline
 from fieldmover.interpolation.limited import move_limited
 from fieldmover.interpolation.lines import integrate_lines
 from fieldmover.interpolation.locate import Locator, inside
+from fieldmover.interpolation.uniform import split_uniform, uniform_edges, uniform_faces
 from fieldmover.projection.potential import potential
 
 Array = NDArray[np.float64]
@@ -62,7 +63,8 @@ def move_flux(flux: FaceFlux, target: Grid, order: Order = 3, outside: Outside =
     FieldError
         If the flux has divergence, the order is unknown, or the target leaves the source with outside="refuse".
     ChargeError
-        If the flux has no potential because a closed surface carries net flux.
+        If the flux has no potential because a closed surface carries net flux. (The mean field of a periodic box is no
+        obstacle: it is moved apart.)
 
     Notes
     -----
@@ -83,8 +85,17 @@ def move_flux(flux: FaceFlux, target: Grid, order: Order = 3, outside: Outside =
         raise FieldError(f"order: {order!r}, expected one of {', '.join(map(repr, get_args(Order)))}")
     if outside not in get_args(Outside):
         raise FieldError(f"outside: {outside!r}, expected one of {', '.join(map(repr, get_args(Outside)))}")
-    edges, known = move_potential(potential(flux), target, order)
-    faces, quantum = _exact_curl(edges)
+    mean, rest = split_uniform(flux)
+    edges, known = move_potential(potential(rest), target, order)
+    uniform = uniform_faces(target, mean) if mean.any() else None
+    if mean.any() and uniform is None:
+        for a, b in zip(edges, uniform_edges(target, mean), strict=True):
+            a += b
+    faces, quantum = _exact_curl(edges, 0.0 if uniform is None else _largest(uniform))
+    if uniform is not None:
+        _round(uniform, quantum)
+        for f, u in zip(faces, uniform, strict=True):
+            f += u
     covered = known_faces(known)
     if all(c.all() for c in covered):
         return FaceFlux(target, faces)
@@ -266,18 +277,18 @@ def _pieces(source: Grid, q: Array, part: float) -> NDArray[np.int64]:
     return np.asarray(2 ** np.ceil(np.log2(np.minimum(most, _MOST_PIECES))), dtype=np.int64)
 
 
-def _exact_curl(edges: Three) -> tuple[Three, float]:
+def _exact_curl(edges: Three, more: float) -> tuple[Three, float]:
     """Round edge values, in place, so that d1 and d2 add them without rounding; faces and the quantum.
 
-    Sums of four edges and of six faces must stay below 2^53 quanta.
+    Sums of four edges and of six faces, to which fluxes up to `more` will be added, must stay below 2^53 quanta.
     """
     largest = _largest(edges)
-    if largest == 0.0:
+    if max(largest, more) == 0.0:
         return d1(edges), 0.0
-    quantum = 2.0 ** (np.ceil(np.log2(largest)) - 51)
+    quantum = 2.0 ** (np.ceil(np.log2(max(largest, more))) - 51)
     _round(edges, quantum)
     faces = d1(edges)
-    least = 2.0 ** (np.ceil(np.log2(max(_largest(faces), quantum))) - 50)
+    least = 2.0 ** (np.ceil(np.log2(max(_largest(faces) + more, quantum))) - 50)
     if least > quantum:  # fluxes as large as circulations: noise, or a grid of few cells
         quantum = 2.0 * least
         _round(edges, quantum)
