@@ -98,6 +98,16 @@ def _table(spline: AxisSpline) -> tuple:
     )
 
 
+@compute.kernel
+def hunt(value, nodes, cell):
+    """Cell that holds a value, by steps from one nearby; the outermost ones reach beyond the ends."""
+    while cell > 0 and value < nodes[cell]:
+        cell -= 1
+    while cell < nodes.size - 2 and value >= nodes[cell + 1]:
+        cell += 1
+    return cell
+
+
 @cache
 def _kernels(order: int) -> tuple[Callable, Callable]:
     """The kernels for one order: with a constant number of basis functions the compiler unrolls its loops.
@@ -107,14 +117,6 @@ def _kernels(order: int) -> tuple[Callable, Callable]:
     """
     width = order + 1
     cells, powers = cell_shape(order, sharp=True)
-
-    @compute.fast_kernel
-    def hunt(value, nodes, cell):
-        while cell > 0 and value < nodes[cell]:
-            cell -= 1
-        while cell < nodes.size - 2 and value >= nodes[cell + 1]:
-            cell += 1
-        return cell
 
     @compute.fast_kernel
     def basis(value, table, cell, b, c):

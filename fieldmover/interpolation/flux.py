@@ -7,6 +7,7 @@ double precision.
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
 from functools import partial
 from itertools import product
 from typing import Literal, get_args
@@ -21,7 +22,7 @@ from fieldmover.forms.incidence import d1
 from fieldmover.grids.grid import Grid, at
 from fieldmover.interpolation.aligned import move_aligned, same_coordinates
 from fieldmover.interpolation.coverage import Outside, fill, known_faces
-from fieldmover.interpolation.evaluate import PotentialSpline
+from fieldmover.interpolation.evaluate import PotentialSpline, hunt
 from fieldmover.interpolation.limited import move_limited
 from fieldmover.interpolation.lines import integrate_lines
 from fieldmover.interpolation.locate import Locator, inside
@@ -200,31 +201,45 @@ def _cells_allowed(source: Grid) -> Array:
     return np.array([8.0 if axis in source.ring_axis else 2.0 for axis in range(3)])
 
 
+@dataclass(frozen=True, eq=False)
+class _Edges:
+    """Single target edges along one axis: where each starts in the target's coordinates, and its length there."""
+
+    target: Grid
+    axis: int
+    start: list[Array]
+    step: Array
+
+    def some(self, group: NDArray[np.int64]) -> _Edges:
+        return replace(self, start=[s[group] for s in self.start], step=self.step[group])
+
+    def at_parts(self, where: Array) -> tuple[Array, Array]:
+        """Positions at the parts `where` of each edge, tangents per edge: shape (3, edges, len(where))."""
+        q = [np.repeat(s[:, None], where.size, axis=1) for s in self.start]
+        q[self.axis] = q[self.axis] + self.step[:, None] * where
+        position = np.stack(self.target.map.to_cartesian(*q))
+        return position, self.target.map.jacobian(*q)[:, self.axis] * self.step[:, None]
+
+
 def _direct(spline: PotentialSpline, locator: Locator, target: Grid, axis: int, places: NDArray[np.int64]) -> Array:
     """Integrals along single edges by points that are each located, in as many pieces as each needs; NaN outside."""
     start = [nodes[place] for nodes, place in zip(target.nodes, places.T, strict=True)]
-    step = target.nodes[axis][places[:, axis] + 1] - start[axis]
+    edges = _Edges(target, axis, start, target.nodes[axis][places[:, axis] + 1] - start[axis])
     integrate = _by_lines if spline.order == 1 else _by_points
-    value, pieces = integrate(spline, locator, target, axis, start, step, 1)
+    value, pieces = integrate(spline, locator, edges, 1)
     for count in np.unique(pieces[pieces > 1]):
         group = np.flatnonzero(pieces == count)
-        value[group], _ = integrate(spline, locator, target, axis, [s[group] for s in start], step[group], int(count))
+        value[group], _ = integrate(spline, locator, edges.some(group), int(count))
     return value
 
 
 def _by_points(
-    spline: PotentialSpline,
-    locator: Locator,
-    target: Grid,
-    axis: int,
-    start: list[Array],
-    step: Array,
-    pieces: int,
+    spline: PotentialSpline, locator: Locator, edges: _Edges, pieces: int
 ) -> tuple[Array, NDArray[np.int64]]:
     """Three Gauss points in each piece of each edge; how many pieces it needs."""
     abscissae, weights = np.polynomial.legendre.leggauss(3)
     where = (np.arange(pieces)[:, None] + 0.5 * (1.0 + abscissae)).ravel() / pieces
-    position, tangent = _along(target, axis, start, step, where)
+    position, tangent = edges.at_parts(where)
     q, dq = locator.pull_back(position.reshape(3, -1), tangent.reshape(3, 1, -1))
     q[:, ~inside(spline.grid, q)] = np.nan
     rates = (spline.covectors(q) * dq[:, 0]).sum(axis=0).reshape(-1, where.size)
@@ -232,18 +247,10 @@ def _by_points(
     return np.asarray((rates * np.tile(0.5 * weights / pieces, pieces)).sum(axis=1)), needed
 
 
-def _by_lines(
-    spline: PotentialSpline,
-    locator: Locator,
-    target: Grid,
-    axis: int,
-    start: list[Array],
-    step: Array,
-    pieces: int,
-) -> tuple[Array, NDArray[np.int64]]:
+def _by_lines(spline: PotentialSpline, locator: Locator, edges: _Edges, pieces: int) -> tuple[Array, NDArray[np.int64]]:
     """Two lines straight in the source's coordinates for each piece of each edge; how many pieces it needs."""
     where = np.linspace(0.0, 1.0, 2 * pieces + 1)
-    position, _ = _along(target, axis, start, step, where)
+    position, _ = edges.at_parts(where)
     q = locator.coordinates(position.reshape(3, -1))
     q[:, ~inside(spline.grid, q)] = np.nan
     q = q.reshape(3, -1, where.size)
@@ -254,14 +261,6 @@ def _by_lines(
             end[d] += turn * np.round((begin[d] - end[d]) / turn)
     sums = spline.straight(begin, end).reshape(-1, 2 * pieces).sum(axis=1)
     return np.asarray(sums), _pieces(spline.grid, q, 1.0)
-
-
-def _along(target: Grid, axis: int, start: list[Array], step: Array, where: Array) -> tuple[Array, Array]:
-    """Positions at the parts `where` of each edge and tangents per edge, shapes (3, edges, len(where))."""
-    q = [np.repeat(s[:, None], where.size, axis=1) for s in start]
-    q[axis] = q[axis] + step[:, None] * where
-    position = np.stack(target.map.to_cartesian(*q))
-    return position, target.map.jacobian(*q)[:, axis] * step[:, None]
 
 
 def _pieces(source: Grid, q: Array, part: float) -> NDArray[np.int64]:
@@ -321,9 +320,9 @@ def _rates(q, dq, covectors, steps1, steps2, steps3, nodes1, nodes2, nodes3, all
                     for out in (out1, out2, out3):
                         out[i0 + i, j0 + j, k0 + k] = np.nan
                     continue
-                cells[0] = _hunt(q[0, i, j, k], nodes1, cells[0])
-                cells[1] = _hunt(q[1, i, j, k], nodes2, cells[1])
-                cells[2] = _hunt(q[2, i, j, k], nodes3, cells[2])
+                cells[0] = hunt(q[0, i, j, k], nodes1, cells[0])
+                cells[1] = hunt(q[1, i, j, k], nodes2, cells[1])
+                cells[2] = hunt(q[2, i, j, k], nodes3, cells[2])
                 widths[0] = allowed[0] * (nodes1[cells[0] + 1] - nodes1[cells[0]])
                 widths[1] = allowed[1] * (nodes2[cells[1] + 1] - nodes2[cells[1]])
                 widths[2] = allowed[2] * (nodes3[cells[2] + 1] - nodes3[cells[2]])
@@ -339,12 +338,3 @@ def _rates(q, dq, covectors, steps1, steps2, steps3, nodes1, nodes2, nodes3, all
                         out2[i0 + i, j0 + j, k0 + k] = rate
                     else:
                         out3[i0 + i, j0 + j, k0 + k] = rate
-
-
-@compute.kernel
-def _hunt(value, nodes, cell):
-    while cell > 0 and value < nodes[cell]:
-        cell -= 1
-    while cell < nodes.size - 2 and value >= nodes[cell + 1]:
-        cell += 1
-    return cell
