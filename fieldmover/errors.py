@@ -19,6 +19,12 @@ class JobError(FieldmoverError, ValueError):
     exit_status = 2
 
 
+class LimitExceeded(FieldmoverError):
+    """A figure of the report exceeds the limit the job sets."""
+
+    exit_status = 3
+
+
 class DataError(FieldmoverError, ValueError):
     """An input is unreadable, damaged, inconsistent or refused."""
 
