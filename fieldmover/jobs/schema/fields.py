@@ -1,0 +1,55 @@
+"""What a job says of the magnetic field and the fluid, on both sides."""
+
+from __future__ import annotations
+
+from typing import Any, Literal
+
+from pydantic import Field
+
+from fieldmover.jobs.schema.tables import Basis, Components, Data, Number, Table, Unit
+
+MASS = "density"
+"""The quantity that weighs those carried by mass."""
+
+
+def data_alone(value: Any) -> Any:
+    return {"data": value} if isinstance(value, str | list) else value
+
+
+class Magnetic(Table):
+    """Where three components of a magnetic field lie and what their numbers mean."""
+
+    data: Components = Field(description="three datasets")
+    basis: Basis | None = None
+    densitised: bool = False
+    unit: Unit = Field(description='"gaussian", "heaviside-lorentz" or a number')
+
+
+class SourceMagnetic(Magnetic):
+    """The magnetic field of the snapshot, or its vector potential."""
+
+    at: Literal["faces", "cells", "edges"] = Field(description='"faces", "cells" or "edges" (a vector potential)')
+
+
+class TargetMagnetic(Magnetic):
+    """The magnetic field to write."""
+
+    at: Literal["faces", "cells"] = "faces"
+
+
+class SourceQuantity(Table):
+    """A fluid quantity: a scalar, or three components of a vector."""
+
+    data: Data = Field(description="a dataset, or three for a vector")
+    carry: Literal["conserve", "by mass"] = Field(
+        description='"conserve" (a density) or "by mass" (a value per unit mass)'
+    )
+    basis: Basis | None = None
+
+
+class TargetQuantity(Table):
+    """Where a fluid quantity goes, and its value where the source does not reach."""
+
+    data: Data = Field(description="a dataset, or three for a vector")
+    basis: Basis | None = None
+    outside: Number = 0.0

@@ -1,0 +1,57 @@
+"""Words and numbers of a job file, and the table that refuses all else."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Field, StringConstraints, Tag
+
+from fieldmover.jobs.numbers import number
+
+Basis = Literal["physical", "coordinate", "cartesian"]
+AxisOrder = Literal["q1 q2 q3", "q1 q3 q2", "q2 q1 q3", "q2 q3 q1", "q3 q1 q2", "q3 q2 q1"]
+
+Mistake = tuple[tuple[str, ...], str]
+
+TAGS = {"rule", "list", "dataset", "scalar", "vector", "absolute", "relative", "[key]"}
+"""Names of alternatives, which validation puts into places and messages leave out."""
+UNITS = ("gaussian", "heaviside-lorentz")
+
+
+def from_text(value: Any) -> Any:
+    return number(value) if isinstance(value, str) else value
+
+
+def unit_of(value: Any) -> Any:
+    is_number = isinstance(value, int | float) and not isinstance(value, bool)
+    if value in UNITS or (is_number and value > 0):
+        return value
+    raise ValueError(f'found {value!r}; give "gaussian", "heaviside-lorentz" or a number above 0')
+
+
+def increasing(values: list[float]) -> list[float]:
+    for place, (a, b) in enumerate(pairwise(values)):
+        if not a < b:
+            raise ValueError(f"positions must increase: {a:g}, then {b:g} at [{place + 1}]")
+    return values
+
+
+def sort_of_data(value: Any) -> str:
+    return "vector" if isinstance(value, list) else "scalar"
+
+
+Three = Field(min_length=3, max_length=3)
+Number = Annotated[float, BeforeValidator(from_text)]
+Text = Annotated[str, StringConstraints(min_length=1, max_length=1000)]
+Dataset = Annotated[str, StringConstraints(pattern=r"^[^\s@]+$", max_length=1000)]
+Components = Annotated[list[Dataset], Three]
+Unit = Annotated[str | float, BeforeValidator(unit_of)]
+Data = Annotated[Annotated[Dataset, Tag("scalar")] | Annotated[Components, Tag("vector")], Discriminator(sort_of_data)]
+Quantity = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][\w -]*$", max_length=100)]
+
+
+class Table(BaseModel):
+    """A table of the job: unknown keys, other types and numbers that are not finite are refused."""
+
+    model_config = ConfigDict(extra="forbid", strict=True, frozen=True, allow_inf_nan=False)
