@@ -11,7 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from fieldmover.errors import DataError
-from fieldmover.snapshots.axes import from_centres, from_dataset, snapped, spaced
+from fieldmover.snapshots.axes import MEANING, from_centres, from_dataset, snapped, spaced
 from fieldmover.snapshots.gate import Snapshot
 from fieldmover.snapshots.layout import ORDERS, Layout, read_axis, staggering
 
@@ -80,7 +80,8 @@ def test_values_that_are_not_finite_are_counted_and_located(path, bad):
 def axis(path, values, stored_cells, ghosts=0, kind="cartesian", centres=False, number=0):
     store(path, q=values)
     with Snapshot(path) as snapshot:
-        return read_axis(snapshot, "q", number, Layout(ghosts=(ghosts,) * 3), stored_cells, kind, centres)
+        layout, meaning = Layout(ghosts=(ghosts,) * 3), MEANING[kind][number]
+        return read_axis(snapshot, "q", number, layout, stored_cells, meaning, centres)
 
 
 def test_positions_with_and_without_those_of_ghosts(path):

@@ -149,7 +149,7 @@ def test_all_mistakes_are_told_at_once_with_their_lines(told):
         ('[0, 1, "pi"]', "[0, 1, 1]", "source.grid.nodes[2]: positions must increase: 1, then 1 at [2]"),
         ('nodes = ["/r"', 'centres = ["/r"', "source.grid.centres[1]"),
         ('nodes = ["/r"', 'nodess = ["/r"', "unknown key (did you mean 'nodes'?)"),
-        ("[0, 1]]", '"/x"]', "target.grid.nodes[2]"),
+        ("[0, 1]]", '"/x"]', "target.grid: '/x' is a dataset; give file, the HDF5 file it lies in"),
         (
             'kind = "cartesian"',
             'kind = "cartesian"\nperiodic = [true, false]',
@@ -158,7 +158,7 @@ def test_all_mistakes_are_told_at_once_with_their_lines(told):
         (
             'kind = "spherical"',
             'kind = "spherical"\nperiodic = [false, false, true]',
-            "periodic is for cartesian grids",
+            "periodic is not for spherical grids; a spherical one has its seam where nodes span 2 pi",
         ),
         (
             'basis = "physical"\nunit',

@@ -5,8 +5,9 @@ from __future__ import annotations
 import math
 from pathlib import Path
 
+from fieldmover.jobs.grids import target_grid
 from fieldmover.jobs.load import Loaded
-from fieldmover.jobs.read import source_datasets, target_grid
+from fieldmover.jobs.read import source_datasets
 from fieldmover.jobs.run import check_output, report_folder
 from fieldmover.jobs.store import bytes_needed
 from fieldmover.report.formats import table

@@ -12,14 +12,16 @@ from numpy.typing import NDArray
 import fieldmover as fm
 from fieldmover.conventions import components
 from fieldmover.conventions.units import size_of
-from fieldmover.errors import DataError, GridError, JobError
+from fieldmover.errors import DataError
 from fieldmover.forms.fields import FaceFlux, Three
+from fieldmover.forms.symmetry import unfold_values
 from fieldmover.grids.grid import Grid
+from fieldmover.grids.placement import placement, turned, unplaced
+from fieldmover.jobs.grids import at_place, source_grid
 from fieldmover.jobs.load import Loaded
-from fieldmover.jobs.schema import AnyGrid, Magnetic, Source, Spaced
-from fieldmover.snapshots.axes import MEANING, from_centres, spaced
+from fieldmover.jobs.schema import Magnetic, Source, Symmetry
 from fieldmover.snapshots.gate import Snapshot
-from fieldmover.snapshots.layout import Layout, Place, read_axis
+from fieldmover.snapshots.layout import Layout, Place
 
 Array = NDArray[np.float64]
 
@@ -61,17 +63,19 @@ def read_source(loaded: Loaded) -> State:
     source = loaded.job.source
     layout = _layout(source)
     with Snapshot(loaded.source) as snapshot:
-        grid = _source_grid(snapshot, source, layout)
-        flux = _read_flux(snapshot, grid, source.magnetic, source.magnetic.at, layout)
+        part = source_grid(loaded, snapshot, layout)
+        whole = Completed(part, source.grid.symmetry)
+        flux = _read_flux(snapshot, whole, source.magnetic, source.magnetic.at, layout)
+        grid = at_place(flux.grid, source.grid.place)
         fluid = {
-            name: _read_quantity(snapshot, grid, quantity.data, quantity.basis, layout)
+            name: _in_common_frame(grid, _read_quantity(snapshot, whole, quantity.data, quantity.basis, layout))
             for name, quantity in source.fluid.items()
         }
         for name, quantity in source.fluid.items():
             if quantity.carry == "conserve":
                 _not_negative(snapshot, str(quantity.data), fluid[name])
         time = snapshot.number(source.time) if isinstance(source.time, str) else source.time
-    return State(loaded.source, flux, fluid, time)
+    return State(loaded.source, FaceFlux(grid, flux.faces), fluid, time)
 
 
 def source_datasets(loaded: Loaded) -> tuple[Grid, dict[str, int]]:
@@ -83,12 +87,13 @@ def source_datasets(loaded: Loaded) -> tuple[Grid, dict[str, int]]:
         As in `read_source`.
     """
     source = loaded.job.source
-    names = [name for name in source.grid.nodes or source.grid.centres or [] if isinstance(name, str)]
-    names += source.magnetic.data
+    names = [*source.grid.datasets, *source.magnetic.data]
     for quantity in source.fluid.values():
         names += [quantity.data] if isinstance(quantity.data, str) else quantity.data
     with Snapshot(loaded.source) as snapshot:
-        return _source_grid(snapshot, source, _layout(source)), {name: snapshot.size(name) for name in names}
+        part = source_grid(loaded, snapshot, _layout(source))
+        grid = at_place(Completed(part, source.grid.symmetry).grid, source.grid.place)
+        return grid, {name: snapshot.size(name) for name in names}
 
 
 def read_target(loaded: Loaded, grid: Grid, path: Path | None = None) -> State:
@@ -100,37 +105,63 @@ def read_target(loaded: Loaded, grid: Grid, path: Path | None = None) -> State:
         If anything in it is missing, misshapen, not finite or refused.
     """
     target = loaded.job.target
-    layout = Layout(target.axes)
+    layout, whole = Layout(target.axes), Completed(unplaced(grid), None)
     path = path or loaded.target
     with Snapshot(path) as snapshot:
-        flux = _read_flux(snapshot, grid, target.magnetic, target.magnetic.at, layout)
+        flux = _read_flux(snapshot, whole, target.magnetic, target.magnetic.at, layout)
         fluid = {
-            name: _read_quantity(snapshot, grid, quantity.data, quantity.basis, layout)
+            name: _in_common_frame(grid, _read_quantity(snapshot, whole, quantity.data, quantity.basis, layout))
             for name, quantity in target.fluid.items()
         }
-    return State(path, flux, fluid)
+    return State(path, FaceFlux(grid, flux.faces), fluid)
 
 
-def target_grid(loaded: Loaded) -> Grid:
-    """The grid that a job writes to.
+class Completed:
+    """A grid as a file has it, and the whole that symmetry makes of it.
 
-    Raises
-    ------
-    JobError
-        If there is none, or its positions do not make a grid.
+    Parameters
+    ----------
+    part : Grid
+        In the frame of its own code.
+    symmetry : Symmetry or None
     """
-    wanted = loaded.job.target.grid
-    if wanted is None:
-        raise JobError(
-            f"{loaded.path}: target.grid: missing; give this table (only clean keeps the grid of the source)"
-        )
-    nodes = [_own_nodes(axis) for axis in wanted.nodes]
-    return _made_in_job("target", wanted, nodes)
+
+    def __init__(self, part: Grid, symmetry: Symmetry | None) -> None:
+        self.part = part
+        self._how: dict[str, Any] = {}
+        if symmetry is not None:
+            mirror = symmetry.equator is not None
+            self._how = {"mirror": mirror, "wedge": symmetry.wedge, "around": symmetry.around}
+        self._across = 1 if part.kind == "spherical" else 2
+        self.grid = fm.unfold(fm.CellContent(part, np.zeros(part.shape)), **self._how).grid if self._how else part
+
+    def flux(self, flux: FaceFlux) -> FaceFlux:
+        """A flux on the part as one on the whole."""
+        return fm.unfold(flux, **self._how) if self._how else flux
+
+    def scalar(self, values: Array) -> Array:
+        """Values in the cells of the part, in those of the whole."""
+        return unfold_values(self.part, values, **self._how) if self._how else values
+
+    def vector(self, values: Array, basis: components.Basis, axial: bool) -> tuple[Array, components.Basis]:
+        """Components of a vector, polar or axial, and their basis: along the axes of the grid if it is unfolded."""
+        if not self._how:
+            return values, basis
+        if basis == "cartesian":
+            basis = "physical"
+            values = components.from_cartesian(self.part, values, basis)
+        parts = [
+            unfold_values(self.part, part, odd=(axis == self._across) != axial, **self._how)
+            for axis, part in enumerate(values)
+        ]
+        return np.stack(parts), basis
 
 
-def flux_from_stored(grid: Grid, arrays: Three, magnetic: Magnetic, at: Place) -> FaceFlux:
-    """Fluxes from numbers as a file stores them, already turned to [i1, i2, i3]."""
-    unit, basis = size_of(magnetic.unit), magnetic.basis or "physical"
+def flux_from_stored(
+    grid: Grid, arrays: Three, magnetic: Magnetic, at: Place, basis: components.Basis | None = None
+) -> FaceFlux:
+    """Fluxes from numbers as a file stores them, already turned to [i1, i2, i3]; `basis` in place of the job's."""
+    unit, basis = size_of(magnetic.unit), basis or magnetic.basis or "physical"
     b1, b2, b3 = (unit * array for array in arrays)
     if at == "faces":
         return components.flux_from_faces(grid, (b1, b2, b3), basis, magnetic.densitised)
@@ -147,18 +178,29 @@ def _layout(source: Source) -> Layout:
     return Layout(source.axes, (g1, g2, g3))
 
 
-def _read_flux(snapshot: Snapshot, grid: Grid, magnetic: Magnetic, at: Place, layout: Layout) -> FaceFlux:
+def _read_flux(snapshot: Snapshot, whole: Completed, magnetic: Magnetic, at: Place, layout: Layout) -> FaceFlux:
     a, b, c = (
-        layout.read(snapshot, name, grid.shape, at, component) for component, name in enumerate(magnetic.data)
+        layout.read(snapshot, name, whole.part.shape, at, component) for component, name in enumerate(magnetic.data)
     )
-    return flux_from_stored(grid, (a, b, c), magnetic, at)
+    if at != "cells" or whole.grid is whole.part:
+        return whole.flux(flux_from_stored(whole.part, (a, b, c), magnetic, at))
+    field, basis = whole.vector(np.stack([a, b, c]), magnetic.basis or "physical", axial=True)
+    return flux_from_stored(whole.grid, (field[0], field[1], field[2]), magnetic, at, basis)
 
 
-def _read_quantity(snapshot: Snapshot, grid: Grid, data: Any, basis: Any, layout: Layout) -> Array:
+def _read_quantity(snapshot: Snapshot, whole: Completed, data: Any, basis: Any, layout: Layout) -> Array:
+    """A scalar, or the Cartesian components of a vector in the frame of the file's code."""
     if isinstance(data, str):
-        return layout.read(snapshot, data, grid.shape, "cells")
-    vector = np.stack([layout.read(snapshot, name, grid.shape, "cells") for name in data])
-    return components.to_cartesian(grid, vector, basis or "physical")
+        return whole.scalar(layout.read(snapshot, data, whole.part.shape, "cells"))
+    vector = np.stack([layout.read(snapshot, name, whole.part.shape, "cells") for name in data])
+    vector, basis = whole.vector(vector, basis or "physical", axial=False)
+    return components.to_cartesian(whole.grid, vector, basis)
+
+
+def _in_common_frame(grid: Grid, values: Array) -> Array:
+    """A quantity on a grid that may be placed; vectors turn with it."""
+    where = placement(grid)
+    return values if where is None or values.ndim == 3 else turned(where[1], values)
 
 
 def _not_negative(snapshot: Snapshot, name: str, density: Array) -> None:
@@ -170,49 +212,3 @@ def _not_negative(snapshot: Snapshot, name: str, density: Array) -> None:
             f"{snapshot.path}: dataset {name!r} has {np.count_nonzero(bad)} negative values, the first "
             f"({density[tuple(first)]:.6g}) at [i1, i2, i3] = {first} without ghosts; expected a density"
         )
-
-
-def _source_grid(snapshot: Snapshot, source: Source, layout: Layout) -> Grid:
-    wanted, magnetic = source.grid, source.magnetic
-    axes = wanted.nodes or wanted.centres or []
-    stored = layout.stored_cells(snapshot, magnetic.data[0], magnetic.at, 0)
-    nodes = []
-    for axis, given in enumerate(axes):
-        if isinstance(given, str):
-            nodes.append(
-                read_axis(
-                    snapshot, given, axis, layout, stored[axis], wanted.kind, wanted.centres is not None
-                )
-            )
-        elif wanted.centres is not None and isinstance(given, list):
-            nodes.append(from_centres(np.array(given), 0, MEANING[wanted.kind][axis]))
-        else:
-            nodes.append(_own_nodes(given))
-    if any(isinstance(given, str) for given in axes):
-        try:
-            return _made(source.grid.kind, nodes, source.grid.periodic)
-        except GridError as error:
-            raise DataError(f"{snapshot.path}: {error}") from None
-    return _made_in_job("source", wanted, nodes)
-
-
-def _own_nodes(axis: Any) -> Array:
-    if isinstance(axis, Spaced):
-        return spaced(axis.from_, axis.to, axis.cells, axis.spacing, axis.ratio or 1.0)
-    return np.array(axis, dtype=np.float64)
-
-
-def _made_in_job(side: str, grid: AnyGrid, nodes: list[Array]) -> Grid:
-    try:
-        return _made(grid.kind, nodes, grid.periodic)
-    except GridError as error:
-        raise JobError(f"{side}.grid: {error}") from None
-
-
-def _made(kind: str, nodes: list[Array], periodic: list[bool]) -> Grid:
-    if kind == "cartesian":
-        x, y, z = nodes
-        return fm.cartesian_grid(x, y, z, periodic=(periodic[0], periodic[1], periodic[2]))
-    if kind == "cylindrical":
-        return fm.cylindrical_grid(*nodes)
-    return fm.spherical_grid(*nodes)

@@ -17,9 +17,10 @@ from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.fluid import FluidPlan
 from fieldmover.jobs.details import divergences, profile, spectra
 from fieldmover.jobs.fluid import move_fluid, totals
+from fieldmover.jobs.grids import target_grid
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.progress import Progress
-from fieldmover.jobs.read import State, read_source, read_target, target_grid
+from fieldmover.jobs.read import State, read_source, read_target
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import Cells, Mask, region_figures, region_masks
 from fieldmover.jobs.store import Store, bytes_needed

@@ -11,6 +11,8 @@ from fieldmover import __version__, cells_from_flux
 from fieldmover.conventions import components
 from fieldmover.conventions.units import size_of
 from fieldmover.diagnostics import relative_divergence
+from fieldmover.forms.fields import FaceFlux
+from fieldmover.grids.placement import placement, turned, unplaced
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.read import State, flux_from_stored
 from fieldmover.snapshots.layout import Layout
@@ -44,11 +46,13 @@ class Store:
         """Magnetic field and fluid, and our own nodes and job text."""
         magnetic = self._target.magnetic
         basis = magnetic.basis or "physical"
+        own = unplaced(state.grid)  # the receiving code knows nothing of the common frame
+        flux = FaceFlux(own, state.flux.faces)
         if magnetic.at == "faces":
-            arrays = components.faces_from_flux(state.flux, basis, magnetic.densitised)
+            arrays = components.faces_from_flux(flux, basis, magnetic.densitised)
         else:
-            cells = cells_from_flux(state.flux, basis=basis)
-            scale = components.cell_density(state.grid) if magnetic.densitised else 1.0
+            cells = cells_from_flux(flux, basis=basis)
+            scale = components.cell_density(own) if magnetic.densitised else 1.0
             arrays = (cells[0] * scale, cells[1] * scale, cells[2] * scale)
         unit = size_of(magnetic.unit)
         units = magnetic.unit if isinstance(magnetic.unit, str) else f"{unit!r} Heaviside-Lorentz"
@@ -60,7 +64,9 @@ class Store:
             if isinstance(quantity.data, str):
                 self._write(quantity.data, values, "cells", "as in the source")
             else:
-                parts = components.from_cartesian(state.grid, values, quantity.basis or "physical")
+                frame = placement(state.grid)
+                vector = values if frame is None else turned(frame[1].T, values)
+                parts = components.from_cartesian(own, vector, quantity.basis or "physical")
                 for dataset, part in zip(quantity.data, parts, strict=True):
                     self._write(dataset, part, "cells", "as in the source")
         for axis, nodes in enumerate(state.grid.nodes, start=1):
@@ -80,10 +86,11 @@ class Store:
         """What the file now holds, storing errors included: the field and the scalars of the fluid."""
         magnetic = self._target.magnetic
         a, b, c = (self._read(name) for name in magnetic.data)
+        flux = flux_from_stored(unplaced(state.grid), (a, b, c), magnetic, magnetic.at)
         scalars = {name: q.data for name, q in self._target.fluid.items() if isinstance(q.data, str)}
         return State(
             state.path,
-            flux_from_stored(state.grid, (a, b, c), magnetic, magnetic.at),
+            FaceFlux(state.grid, flux.faces),
             {name: self._read(dataset) for name, dataset in scalars.items()},
             state.time,
         )

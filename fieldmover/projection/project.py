@@ -172,17 +172,20 @@ def _iterate(
 
     To save memory the faces are made when the vectors of the iteration are gone, and p takes the place of `net`.
     """
-    faces, left, history = None, first, []
+    faces, left, history, enough = None, first, [], tolerance * first
     for _ in range(_RESTARTS):
-        solution = conjugate_gradients(operator.apply, precondition, net, tolerance * first / left)
+        solution = conjugate_gradients(operator.apply, precondition, net, enough / left)
         history += [value * left / first for value in solution.history]
         net[...], reason = solution.p, solution.reason
         del solution
-        faces = start() if faces is None else faces
+        if faces is None:
+            faces = start()
+            # A field that was nearly clean cannot be told from a clean one below the rounding of its fluxes.
+            enough = max(enough, _CLEAN * max(max(float(f.max()), -float(f.min())) for f in faces))
         operator.correct(faces, net)
         left = operator.source(faces, net).largest
         history[-1:] = [left / first]
-        if left <= tolerance * first:
+        if left <= enough:
             return faces, history
         if reason != "converged":
             break

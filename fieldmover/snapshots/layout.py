@@ -17,7 +17,7 @@ from fieldmover.errors import DataError
 from fieldmover.snapshots import axes
 from fieldmover.snapshots.gate import Snapshot
 
-Place = Literal["faces", "cells", "edges"]
+Place = Literal["faces", "cells", "edges", "nodes"]
 Shape = tuple[int, int, int]
 
 ORDERS: dict[str, tuple[int, ...]] = {
@@ -31,11 +31,11 @@ def staggering(at: Place, component: int) -> Shape:
 
     Examples
     --------
-    >>> staggering("faces", 0), staggering("edges", 0), staggering("cells", 0)
-    ((1, 0, 0), (0, 1, 1), (0, 0, 0))
+    >>> staggering("faces", 0), staggering("edges", 0), staggering("cells", 0), staggering("nodes", 0)
+    ((1, 0, 0), (0, 1, 1), (0, 0, 0), (1, 1, 1))
     """
-    own = {"faces": 1, "edges": 0, "cells": 0}[at]
-    other = {"faces": 0, "edges": 1, "cells": 0}[at]
+    own = {"faces": 1, "edges": 0, "cells": 0, "nodes": 1}[at]
+    other = {"faces": 0, "edges": 1, "cells": 0, "nodes": 1}[at]
     a, b, c = (own if axis == component else other for axis in range(3))
     return a, b, c
 
@@ -124,7 +124,12 @@ class Layout:
         if found == expected:
             return
         q = f"q{component + 1}"
-        where = {"faces": f"on faces normal to {q}", "edges": f"on edges along {q}", "cells": "in cells"}[at]
+        where = {
+            "faces": f"on faces normal to {q}",
+            "edges": f"on edges along {q}",
+            "cells": "in cells",
+            "nodes": "at nodes",
+        }[at]
         others = (Layout(order, ghosts) for ghosts in (self.ghosts, (0, 0, 0)) for order in ORDERS)
         fits = next((other for other in others if other.stored_shape(shape) == found), None)
         hint = f'; axes = "{fits.order}", ghosts = {list(fits.ghosts)} would fit' if fits else ""
@@ -140,7 +145,7 @@ def read_axis(
     axis: int,
     layout: Layout,
     stored_cells: int,
-    kind: axes.Kind,
+    meaning: axes.Angle | None,
     centres: bool,
 ) -> NDArray[np.float64]:
     """Nodes of one axis from a dataset of node positions or cell centres, with or without those of ghosts.
@@ -156,8 +161,8 @@ def read_axis(
     stored_cells : int
         Cells along the axis that the arrays hold, ghosts included: it tells whether the positions include
         them.
-    kind : str
-        The kind of grid.
+    meaning : str or None
+        What the axis measures (`axes.MEANING`).
     centres : bool
         Whether the dataset holds cell centres.
 
@@ -190,7 +195,36 @@ def read_axis(
             f"{positions[first + 1]:.9g} at [{first + 1}]; expected increasing {what} of q{axis + 1}"
         )
     strip = ghosts if shape[0] != bare else 0
-    meaning = axes.MEANING[kind][axis]
     if centres:
         return axes.from_centres(positions, strip, meaning)
     return axes.from_dataset(positions[strip : len(positions) - strip], meaning)
+
+
+def read_positions(
+    snapshot: Snapshot, name: str, layout: Layout, stored_cells: Shape, at: Literal["nodes", "cells"]
+) -> NDArray[np.float64]:
+    """One coordinate of every node or cell centre, with or without those of ghosts in the file.
+
+    Parameters
+    ----------
+    snapshot, name, layout
+        As `read_axis`.
+    stored_cells : three int
+        Cells that the arrays hold, ghosts included: they tell whether the positions include them.
+    at : "nodes" or "cells"
+
+    Returns
+    -------
+    (n1 + 1, n2 + 1, n3 + 1) or (n1, n2, n3) array
+        Without ghosts.
+
+    Raises
+    ------
+    DataError
+        If the shape fits neither, or a value is not finite.
+    """
+    a, b, c = (n - 2 * g for n, g in zip(stored_cells, layout.ghosts, strict=True))
+    bare = Layout(layout.order)
+    extra = staggering(at, 0)
+    stripped = bare.stored_shape((a + extra[0], b + extra[1], c + extra[2])) == snapshot.shape(name)
+    return (bare if stripped else layout).read(snapshot, name, (a, b, c), at)

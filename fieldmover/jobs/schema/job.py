@@ -24,20 +24,15 @@ from fieldmover.jobs.schema.tables import (
     Basis,
     Mistake,
     Quantity,
+    Sought,
     Table,
     Text,
     Three,
-    from_text,
     sort_of_data,
 )
 
 UNFIT = re.compile(r"[:<>&\"'\s]")
 """In the name of a file with a view: readers of XDMF take these for something else."""
-
-
-def _time(value: Any) -> Any:
-    """A number, or where to find it: a dataset or `path@attribute`, which begin with a slash."""
-    return value if isinstance(value, str) and value.startswith("/") else from_text(value)
 
 
 class Source(Table):
@@ -46,7 +41,7 @@ class Source(Table):
     file: Text = Field(description="the snapshot, an HDF5 file")
     axes: AxisOrder = "q1 q2 q3"
     ghosts: Annotated[list[Annotated[int, Field(ge=0, le=100)]], Three] = [0, 0, 0]
-    time: Annotated[float | str, BeforeValidator(_time)] | None = None
+    time: Sought | None = None
     grid: SourceGrid
     magnetic: SourceMagnetic
     fluid: dict[Quantity, SourceQuantity] = {}

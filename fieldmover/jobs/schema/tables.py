@@ -23,6 +23,11 @@ def from_text(value: Any) -> Any:
     return number(value) if isinstance(value, str) else value
 
 
+def sought(value: Any) -> Any:
+    """A number, or where to find it: a dataset or `path@attribute`, which begin with a slash."""
+    return value if isinstance(value, str) and value.startswith("/") else from_text(value)
+
+
 def unit_of(value: Any) -> Any:
     is_number = isinstance(value, int | float) and not isinstance(value, bool)
     if value in UNITS or (is_number and value > 0):
@@ -43,6 +48,8 @@ def sort_of_data(value: Any) -> str:
 
 Three = Field(min_length=3, max_length=3)
 Number = Annotated[float, BeforeValidator(from_text)]
+Sought = Annotated[float | str, BeforeValidator(sought)]
+"""A number, or where the snapshot holds it."""
 Text = Annotated[str, StringConstraints(min_length=1, max_length=1000)]
 Dataset = Annotated[str, StringConstraints(pattern=r"^[^\s@]+$", max_length=1000)]
 Components = Annotated[list[Dataset], Three]
