@@ -10,11 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 import fieldmover as fm
-from fieldmover.diagnostics import cell_energies, closed_walls, relative_divergence
-from fieldmover.errors import DataError, JobError
+from fieldmover.diagnostics import cell_energies, relative_divergence
+from fieldmover.errors import JobError
 from fieldmover.forms.fields import CellContent, FaceFlux
 from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.fluid import FluidPlan
+from fieldmover.jobs.cleaning import cleaned
 from fieldmover.jobs.details import divergences, profile, spectra
 from fieldmover.jobs.fluid import move_fluid, totals
 from fieldmover.jobs.grids import target_grid
@@ -27,7 +28,6 @@ from fieldmover.jobs.store import Store, bytes_needed
 from fieldmover.jobs.supervise import note
 from fieldmover.jobs.verdicts import limits_table
 from fieldmover.jobs.warm import compiling_fluid
-from fieldmover.projection.project import project
 from fieldmover.report.figures import Plane, pictures
 from fieldmover.report.formats import to_json
 from fieldmover.report.text import terminal
@@ -36,11 +36,6 @@ from fieldmover.snapshots.viewable import sidecar
 from fieldmover.snapshots.write import Output, check_space, write_text
 
 Array = NDArray[np.float64]
-
-CLEAN_ENOUGH = 1e-12
-"""Relative divergence that needs no cleaning."""
-CHARGE = 1e-2
-"""Part of the flux through a closed inner wall that may be net; more is no error of discretisation."""
 
 
 @dataclass(frozen=True)
@@ -94,7 +89,8 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
         with progress.stage("reading"):
             source = _source(loaded, record)
         with progress.stage("cleaning"):
-            clean_flux = _cleaned(loaded, source, record, job.move.clean)
+            clean_flux = cleaned(loaded, source.flux, record, job.move.clean, to_move=True)
+            record.field("cleaned", clean_flux)
         with progress.stage("moving the field"):
             flux = fm.move_flux(clean_flux, target, order=job.move.order, outside=job.move.outside)
             record.field("moved", flux)
@@ -104,9 +100,7 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
     return _store(work, source, moved, plan, {"cleaned": clean_flux, "moved": flux}, overwrite)
 
 
-def clean(
-    loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False
-) -> Outcome:
+def clean(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False) -> Outcome:
     """Remove monopoles and write the field on the grid it was read on, with the fluid as it was.
 
     Parameters
@@ -123,9 +117,7 @@ def clean(
     """
     job = loaded.job
     if job.target.grid is not None:
-        raise JobError(
-            f"{loaded.path}: target.grid: clean keeps the grid of the source; leave this table out"
-        )
+        raise JobError(f"{loaded.path}: target.grid: clean keeps the grid of the source; leave this table out")
     check_output(loaded, overwrite)
     check_folder(folder or report_folder(loaded))
     progress, record = Progress(5, quiet), Record(loaded, "clean")
@@ -134,11 +126,12 @@ def clean(
         work = _work(loaded, "clean", source.grid, folder, progress, record)
         check_space(loaded.target, bytes_needed(loaded, source.grid.shape))
     with progress.stage("cleaning"):
-        flux = _cleaned(loaded, source, record, "always")
+        flux = cleaned(loaded, source.flux, record, "always", to_move=False)
+        record.field("cleaned", flux)
         plan = FluidPlan(source.grid, source.grid)
         fluid = {name: source.fluid[name] for name in job.target.fluid}
-        cleaned = State(loaded.target, flux, fluid, source.time)
-    return _store(work, source, cleaned, plan, {"cleaned": flux}, overwrite)
+        state = State(loaded.target, flux, fluid, source.time)
+    return _store(work, source, state, plan, {"cleaned": flux}, overwrite)
 
 
 def check(
@@ -249,23 +242,6 @@ def _source(loaded: Loaded, record: Record) -> State:
     return source
 
 
-def _cleaned(loaded: Loaded, source: State, record: Record, wanted: str) -> FaceFlux:
-    """The field without monopoles; a hole in the grid may not hide a real one."""
-    divergence = record.values["fields"]["source"]["divergence"]["linf"]
-    flux = source.flux
-    if not (wanted == "never" or (wanted == "when needed" and divergence <= CLEAN_ENOUGH)):
-        inner, _ = closed_walls(flux)
-        if inner is not None and abs(inner.net) > CHARGE * inner.gross:
-            raise DataError(
-                f"{source.path}: net magnetic flux {inner.net:.6g} through the closed inner wall, "
-                f"{abs(inner.net) / inner.gross:.2g} of all that passes it; a field without monopoles has none"
-            )
-        flux, found = project(flux)
-        record.cleaning(found.as_dict())
-    record.field("cleaned", flux)
-    return flux
-
-
 def _store(
     work: Work, source: State, moved: State, plan: FluidPlan, steps: dict[str, FaceFlux], overwrite: bool
 ) -> Outcome:
@@ -276,6 +252,7 @@ def _store(
         store = Store(loaded, output)
         with progress.stage("writing"):
             store.write_state(moved)
+            record.values["stencil_cleaning"] = store.stencil_cleaning
         with progress.stage("measuring"):
             stored = store.read_state(moved)
             record.field("stored", stored.flux)
@@ -303,14 +280,10 @@ def _compare(work: Work, source: State, stored: State, plan: FluidPlan, steps: d
         if name in ("source", "stored"):
             cells[name] = found
     record.energies(energies)
-    record.values["profile"] = profile(
-        stored.grid, {step: np.where(whole, e, 0.0) for step, e in cells.items()}
-    )
+    record.values["profile"] = profile(stored.grid, {step: np.where(whole, e, 0.0) for step, e in cells.items()})
     if work.regions:
         figures = Cells(relative_divergence(stored.flux), cells["stored"], cells["source"], whole, volumes)
-        record.values["regions"] = {
-            name: region_figures(figures, mask) for name, mask in work.regions.items()
-        }
+        record.values["regions"] = {name: region_figures(figures, mask) for name, mask in work.regions.items()}
     record.fluid(totals(work.loaded.job, source, plan, stored.fluid))
 
 
@@ -324,9 +297,7 @@ def _finish(work: Work, source: State, stored: State | None) -> Outcome:
         shown = pictures(work.planes, [state.grid for state in states.values()], sides)
         record.pictures(shown)
         record.values["divergences"] = divergences({step: state.flux for step, state in states.items()})
-        record.values["spectra"] = spectra(
-            {step: (state.grid, fields[step]) for step, state in states.items()}
-        )
+        record.values["spectra"] = spectra({step: (state.grid, fields[step]) for step, state in states.items()})
     record.finish(progress)
     path = write_report(work.folder, record.values, shown)
     return Outcome(3 if record.exceeded else 0, f"{terminal(record.values)}\nreport: {path}")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,11 +11,15 @@ from numpy.typing import NDArray
 from fieldmover import __version__, cells_from_flux
 from fieldmover.conventions import components
 from fieldmover.conventions.units import size_of
+from fieldmover.conventions.vector_potential import cells_from_potential, edges_from_potential
 from fieldmover.diagnostics import relative_divergence
+from fieldmover.errors import GridError, JobError
 from fieldmover.forms.fields import FaceFlux
 from fieldmover.grids.placement import placement, turned, unplaced
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.read import State, flux_from_stored
+from fieldmover.projection.cells import project_cells
+from fieldmover.projection.potential import potential
 from fieldmover.snapshots.layout import Layout
 from fieldmover.snapshots.viewable import sidecar, write_view, xdmf
 from fieldmover.snapshots.write import Output, write_text
@@ -40,6 +45,7 @@ class Store:
         self._target = loaded.job.target
         self._output = output
         self._layout = Layout(self._target.axes)
+        self.stencil_cleaning: dict[str, Any] | None = None  # what it took to suit the stencil of the receiver
         self._type = np.float32 if self._target.precision == "single" else np.float64
 
     def write_state(self, state: State) -> None:
@@ -51,7 +57,7 @@ class Store:
         if magnetic.at == "faces":
             arrays = components.faces_from_flux(flux, basis, magnetic.densitised)
         else:
-            cells = cells_from_flux(flux, basis=basis)
+            cells = self._cells(flux, basis)
             scale = components.cell_density(own) if magnetic.densitised else 1.0
             arrays = (cells[0] * scale, cells[1] * scale, cells[2] * scale)
         unit = size_of(magnetic.unit)
@@ -59,6 +65,7 @@ class Store:
         for name, array, axis in zip(magnetic.data, arrays, (1, 2, 3), strict=True):
             where = f"faces normal to q{axis}" if magnetic.at == "faces" else "cells"
             self._write(name, array / unit, where, units)
+        self._write_potential(flux)
         for name, quantity in self._target.fluid.items():
             values = state.fluid[name]
             if isinstance(quantity.data, str):
@@ -73,13 +80,37 @@ class Store:
             self._output.write(f"{OWN}/nodes/q{axis}", np.array(nodes), {"kind": state.grid.kind})
         self._text("job", self.loaded.text)
         if self._target.view:
-            write_view(self._output, f"{OWN}/view", state.grid, _viewed(state))
+            write_view(self._output, state.grid, _viewed(state))
+
+    def _cells(self, flux: FaceFlux, basis: components.Basis) -> Array:
+        """Mean fields of cells, without the divergence that the receiving code's stencil would see."""
+        stencil = self._target.magnetic.stencil
+        if stencil == "faces":
+            return cells_from_flux(flux, basis=basis)
+        cells = cells_from_flux(flux, basis="cartesian")  # the same in any basis of such a grid
+        try:
+            cells, found = project_cells(flux.grid, cells, stencil)
+        except GridError as error:
+            raise JobError(f'{self.loaded.path}: target.magnetic.stencil = "{stencil}": {error}') from None
+        self.stencil_cleaning = found.as_dict()
+        return cells
+
+    def _write_potential(self, flux: FaceFlux) -> None:
+        wanted = self._target.potential
+        if wanted is None:
+            return
+        pot, basis, unit = potential(flux, wanted.gauge), wanted.basis or "physical", size_of(wanted.unit)
+        at_edges = wanted.at == "edges"
+        arrays = edges_from_potential(pot, basis) if at_edges else cells_from_potential(pot, basis)
+        units = f"{wanted.unit if isinstance(wanted.unit, str) else repr(unit) + ' Heaviside-Lorentz'} x length"
+        for name, array, axis in zip(wanted.data, arrays, (1, 2, 3), strict=True):
+            self._write(name, array / unit, f"edges along q{axis}" if at_edges else "cells", units)
 
     def publish_view(self, state: State) -> None:
         """The XDMF file beside the output, if the job asks for it; the output has its name by then."""
         if self._target.view:
             path = self._output.path
-            text = xdmf(path.name, f"{OWN}/view", state.grid, _viewed(state), state.time or 0.0)
+            text = xdmf(path.name, state.grid, _viewed(state), state.time or 0.0)
             write_text(sidecar(path), text)
 
     def read_state(self, state: State) -> State:
@@ -121,7 +152,8 @@ def _viewed(state: State) -> dict[str, Array]:
 def bytes_needed(loaded: Loaded, shape: tuple[int, int, int]) -> int:
     """What the arrays of an output take, roughly, for a grid of so many cells along each axis."""
     target = loaded.job.target
-    arrays = 3 + sum(1 if isinstance(quantity.data, str) else 3 for quantity in target.fluid.values())
+    sizes = [1 if isinstance(quantity.data, str) else 3 for quantity in target.fluid.values()]
+    arrays = 3 + 3 * (target.potential is not None) + sum(sizes)
     view = 4 * (arrays + 1) + (0 if _is_box(loaded) else 24) if target.view else 0
     return int(1.1 * math.prod(shape) * (arrays * (4 if target.precision == "single" else 8) + view))
 

@@ -29,7 +29,7 @@ from fieldmover.snapshots.gate import hdf5
 CHUNK = 64  # values along each axis at most: 2 MiB in double precision
 MARGIN = 2**20  # bytes kept free beside what the arrays take
 
-Attribute = str | int | float
+Attribute = str | int | float | NDArray[Any]
 
 
 class LatchingFile:
@@ -161,8 +161,12 @@ class Output:
     ) -> None:
         """A dataset to be filled by :meth:`write_slab`, chunked evenly and checksummed."""
         dataset = self._file.create_dataset(name, shape, dtype, chunks=chunks(shape), fletcher32=True)
-        for key, value in (attributes or {}).items():
-            dataset.attrs[key] = np.bytes_(value.encode("ascii")) if isinstance(value, str) else value
+        _describe(dataset, attributes or {})
+        self._check()
+
+    def describe(self, name: str, attributes: Mapping[str, Attribute]) -> None:
+        """Attributes of a group, made if missing."""
+        _describe(self._file.require_group(name), attributes)
         self._check()
 
     def write_slab(self, name: str, where: tuple[slice, ...], array: NDArray) -> None:
@@ -206,6 +210,12 @@ class Output:
         if isinstance(error, FileExistsError) and not self.overwrite:
             return OutputError(f"{self.path}: exists; give --overwrite to replace it")
         return unwritable(self.path, error)
+
+
+def _describe(thing: Any, attributes: Mapping[str, Attribute]) -> None:
+    """Attributes as HDF5 keeps them outside its heap: text has a fixed length."""
+    for key, value in attributes.items():
+        thing.attrs[key] = np.bytes_(value.encode("ascii")) if isinstance(value, str) else value
 
 
 def check_space(path: Path, size: int) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any, Literal
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from fieldmover.jobs.schema.tables import Basis, Components, Data, Number, Table, Unit
 
@@ -35,6 +35,29 @@ class TargetMagnetic(Magnetic):
     """The magnetic field to write."""
 
     at: Literal["faces", "cells"] = "faces"
+    stencil: Literal["faces", "central", "corners"] = "faces"
+
+    @model_validator(mode="after")
+    def _fits(self) -> TargetMagnetic:
+        if self.stencil != "faces" and self.at != "cells":
+            raise ValueError(f'stencil = "{self.stencil}" takes the divergence of values at = "cells"')
+        return self
+
+
+class TargetPotential(Table):
+    """A vector potential to write beside the magnetic field."""
+
+    data: Components = Field(description="three datasets")
+    at: Literal["edges", "cells"] = "edges"
+    basis: Basis | None = None
+    unit: Unit = Field(description='"gaussian", "heaviside-lorentz" or a number')
+    gauge: Literal["smooth", "axial", "none"] = "smooth"
+
+    @model_validator(mode="after")
+    def _fits(self) -> TargetPotential:
+        if self.at == "edges" and self.basis == "cartesian":
+            raise ValueError('basis = "cartesian" goes with at = "cells"; edges follow the grid')
+        return self
 
 
 class SourceQuantity(Table):

@@ -9,11 +9,13 @@ from typing import Annotated, Any, Literal
 from pydantic import BeforeValidator, Field
 
 from fieldmover.jobs.names import known
+from fieldmover.jobs.schema.clean import Clean
 from fieldmover.jobs.schema.fields import (
     MASS,
     SourceMagnetic,
     SourceQuantity,
     TargetMagnetic,
+    TargetPotential,
     TargetQuantity,
     data_alone,
 )
@@ -56,6 +58,7 @@ class Target(Table):
     view: bool = False
     grid: TargetGrid | None = None
     magnetic: TargetMagnetic
+    potential: TargetPotential | None = None
     fluid: dict[Quantity, Annotated[TargetQuantity, BeforeValidator(data_alone)]] = {}
 
 
@@ -74,6 +77,7 @@ class Job(Table):
     source: Source
     target: Target
     move: Move = Move()
+    clean: Clean = Clean()
     report: Report = Report()
     regions: dict[Quantity, Region] = {}
     limits: Limits = {}
@@ -84,6 +88,7 @@ class Job(Table):
             *self._basis_mistakes(),
             *self._fluid_mistakes(),
             *self._name_mistakes(),
+            *self._region_mistakes(),
             *self._limit_mistakes(),
         ]
 
@@ -105,6 +110,8 @@ class Job(Table):
             if magnetic.densitised and (magnetic.basis != "coordinate" or magnetic.at == "edges"):
                 found.append(((*place, "densitised"), 'goes with basis = "coordinate" of a field at faces or cells'))
             vectors: list[tuple[tuple[str, ...], Basis | None]] = [(place, magnetic.basis)]
+            if (pot := getattr(table, "potential", None)) is not None:
+                vectors.append(((side, "potential"), pot.basis))
             for name, quantity in table.fluid.items():
                 if isinstance(quantity.data, list):
                     vectors.append(((side, "fluid", name), quantity.basis))
@@ -136,6 +143,15 @@ class Job(Table):
             found.append((("limits", "mass_change"), f'needs target.fluid.{MASS}, carried by "conserve"'))
         return found
 
+    def _region_mistakes(self) -> list[Mistake]:
+        """Regions that the cleaning speaks of but the job does not have."""
+        known_here = ", ".join(self.regions) or "none"
+        return [
+            (("clean", key), f"no region {name!r}; the job has {known_here}")
+            for key in ("frozen", "excised")
+            if (name := getattr(self.clean, key)) is not None and name not in self.regions
+        ]
+
     def _limit_mistakes(self) -> list[Mistake]:
         """Limits on regions and quantities that the job does not have."""
         names = known(self.conserved, self.regions)
@@ -154,6 +170,8 @@ class Job(Table):
             unfit = f'file {file!r}: a view needs a name without : < > & quotes and spaces that does not end in ".xdmf"'
             return [(("target", "view"), unfit)]
         names = [(("target", "magnetic", "data"), name) for name in self.target.magnetic.data]
+        if self.target.potential is not None:
+            names += [(("target", "potential", "data"), name) for name in self.target.potential.data]
         for quantity, where in self.target.fluid.items():
             data = where.data if isinstance(where.data, list) else [where.data]
             names += [(("target", "fluid", quantity), name) for name in data]
