@@ -98,31 +98,22 @@ class _Name:
 
 @dataclass(frozen=True)
 class _Operation:
-    """An operation on the values of other nodes; `truth` where both it and they are true or false."""
+    """An operation on the values of other nodes; what is true counts 1, and what is not 0 is true."""
 
     function: Callable | str
     parts: tuple[Any, ...]
     gives_truth: bool = False
-    takes_truth: bool = False
 
     def compute(self, values: Mapping[str, Any], np: Any) -> Any:
         parts = [part.compute(values, np) for part in self.parts]
-        if self.function == "where":
-            return np.where(_truth(parts[0], np), *map(_number, parts[1:]))
-        parts = [_truth(part, np) for part in parts] if self.takes_truth else [_number(part) for part in parts]
+        parts = [part * 1.0 if part.dtype == bool else part for part in parts]
         function = getattr(np, self.function) if isinstance(self.function, str) else self.function
+        if self.function == "where":
+            return function(*parts)
         result = function(*parts[:2])
         for part in parts[2:]:
             result = function(result, part)
         return result
-
-
-def _number(value: Any) -> Any:
-    return value * 1.0 if value.dtype == bool else value
-
-
-def _truth(value: Any, np: Any) -> Any:
-    return value if value.dtype == bool else np.not_equal(value, 0.0)
 
 
 class Expression:
@@ -269,19 +260,19 @@ class Expression:
             case ast.UnaryOp(op=ast.UAdd()):
                 return _Operation(operator.pos, (*parts,))
             case ast.UnaryOp(op=ast.Not()):
-                return _Operation("logical_not", (*parts,), gives_truth=True, takes_truth=True)
+                return _Operation("logical_not", (*parts,), gives_truth=True)
             case ast.BinOp() if type(node.op) in _ARITHMETIC:
                 self._check_power(node)
                 return _Operation(_ARITHMETIC[type(node.op)], (*parts,))
             case ast.BoolOp():
                 name = "logical_and" if isinstance(node.op, ast.And) else "logical_or"
-                return _Operation(name, (*parts,), gives_truth=True, takes_truth=True)
+                return _Operation(name, (*parts,), gives_truth=True)
             case ast.Compare() if all(type(op) in _COMPARISONS for op in node.ops):
                 pairs = [
                     _Operation(_COMPARISONS[type(op)], (left, right), gives_truth=True)
                     for op, left, right in zip(node.ops, parts, parts[1:], strict=False)
                 ]
-                return pairs[0] if len(pairs) == 1 else _Operation("logical_and", (*pairs,), True, True)
+                return pairs[0] if len(pairs) == 1 else _Operation("logical_and", (*pairs,), True)
             case ast.Call():
                 return self._call(node, parts)
         raise self._refused(node)

@@ -13,10 +13,10 @@ from fieldmover.conventions.components import (
     faces_from_flux,
     flux_from_faces,
     from_cartesian,
-    potential_from_edges,
     to_cartesian,
 )
 from fieldmover.conventions.units import size_of
+from fieldmover.conventions.vector_potential import potential_from_edges
 from fieldmover.errors import DataError, FieldError
 
 GRIDS = {

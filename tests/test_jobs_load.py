@@ -174,7 +174,7 @@ def test_all_mistakes_are_told_at_once_with_their_lines(told):
         ),
         ('carry = "conserve"', 'carry = "by mass"', 'source.fluid.velocity.carry: "by mass" needs a scalar'),
         ('carry = "by mass"', 'carry = "conserve"', "source.fluid.velocity.carry: a vector is carried"),
-        ('carry = "conserve"', 'carry = "keep"', "found 'keep'; expected 'conserve' or 'by mass'"),
+        ('carry = "conserve"', 'carry = "keep"', "found 'keep'; expected 'conserve', 'by mass' or 'point'"),
         (
             'density = "/rho"',
             'densty = "/rho"',

@@ -13,6 +13,7 @@ import pytest
 
 import fieldmover as fm
 from fieldmover.conventions import components, units
+from fieldmover.conventions.vector_potential import potential_from_edges
 from tests.fields import dipole
 
 STEP = 1e-4
@@ -98,7 +99,7 @@ def test_components_of_the_potential_on_edges(kind, basis):
     exact = fm.potential_from_function(grid, DIPOLE.a)
     value = POTENTIAL[kind, basis]
     stored = tuple(np.full(grid.edge_shape(d), value if d == 2 else 0.0) for d in range(3))
-    found = components.potential_from_edges(grid, stored, basis)
+    found = potential_from_edges(grid, stored, basis)
     np.testing.assert_allclose(found.a3[2, 2, 2], exact.a3[2, 2, 2], rtol=TOLERANCE)
     assert not found.a1.any()
     assert not found.a2.any()

@@ -2,8 +2,8 @@
 
 With orthonormal ("physical") components a face carries B times its area. With coordinate components B^i it
 carries B^i times the integral of sqrt(gamma) over the face, and with densitised ones, which include
-sqrt(gamma), the number times the steps of the two coordinates. All three are products of one array per axis
-on these grids.
+sqrt(gamma), the number times the steps of the two coordinates. All three are products of one array per axis on these
+grids; with a metric the integral is taken by quadrature, on any grid. Only B^i itself needs the metric.
 """
 
 from __future__ import annotations
@@ -13,8 +13,9 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from fieldmover.conventions.metrics import Metric, centre_jacobian, face_elements
 from fieldmover.errors import DataError, FieldError
-from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges, close_faces
+from fieldmover.forms.fields import FaceFlux, Three, close_faces
 from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, area_factors, at, outer, sines, volume_factors
 from fieldmover.grids.placement import placement
@@ -23,17 +24,21 @@ Array = NDArray[np.float64]
 Factors = tuple[Array, Array, Array]
 Basis = Literal["physical", "coordinate", "cartesian"]
 
+_CLOSED = ("cartesian", "cylindrical", "spherical")
+
 SEAM = 1e-5
 """What the two copies of a seam may differ by, relative to the largest value: single precision, and more."""
 
 
-def flux_from_faces(grid: Grid, arrays: Three, basis: Basis, densitised: bool = False) -> FaceFlux:
+def flux_from_faces(
+    grid: Grid, arrays: Three, basis: Basis, densitised: bool = False, metric: Metric | None = None
+) -> FaceFlux:
     """Fluxes from field components stored on faces.
 
     Parameters
     ----------
     grid : Grid
-        Cartesian, cylindrical or spherical.
+        Cartesian, cylindrical or spherical; any with a metric, or with densitised components.
     arrays : three arrays
         The component normal to each face, shapes (n1 + 1, n2, n3), (n1, n2 + 1, n3), (n1, n2, n3 + 1), unit
         B.
@@ -41,6 +46,8 @@ def flux_from_faces(grid: Grid, arrays: Three, basis: Basis, densitised: bool = 
         Orthonormal components, or B^i. On a Cartesian grid both are the same, and so is "cartesian".
     densitised : bool
         Whether coordinate components include sqrt(gamma).
+    metric : Metric, optional
+        Of the space, `FlatMetric` too; flat where left out. Densitised components do not need it.
 
     Returns
     -------
@@ -50,9 +57,9 @@ def flux_from_faces(grid: Grid, arrays: Three, basis: Basis, densitised: bool = 
     Raises
     ------
     DataError
-        If the two copies of a seam differ.
+        If the two copies of a seam differ, or the metric does not fit the grid.
     FieldError
-        If the grid is of another kind.
+        If the grid is of another kind, or orthonormal components are given with a metric.
 
     Examples
     --------
@@ -61,17 +68,15 @@ def flux_from_faces(grid: Grid, arrays: Three, basis: Basis, densitised: bool = 
     >>> flux_from_faces(grid, (np.ones((2, 1, 1)), np.ones((1, 2, 1)), np.ones((1, 1, 2))), "physical").f3
     array([[[6., 6.]]])
     """
-    faces = [
-        values * outer(factors)
-        for values, factors in zip(arrays, _faces(grid, basis, densitised), strict=True)
-    ]
-    _check_seams(grid, faces, "faces")
+    measures = _face_measures(grid, basis, densitised, metric)
+    faces = [values * measure for values, measure in zip(arrays, measures, strict=True)]
+    check_seams(grid, faces, "faces")
     three = (faces[0], faces[1], faces[2])
     close_faces(grid, three)
     return FaceFlux(grid, three)
 
 
-def faces_from_flux(flux: FaceFlux, basis: Basis, densitised: bool = False) -> Three:
+def faces_from_flux(flux: FaceFlux, basis: Basis, densitised: bool = False, metric: Metric | None = None) -> Three:
     """Field components on faces from fluxes, the inverse of `flux_from_faces`; 0 on collapsed faces.
 
     Examples
@@ -83,42 +88,15 @@ def faces_from_flux(flux: FaceFlux, basis: Basis, densitised: bool = False) -> T
     array([0.5, 0.5])
     """
     out = []
-    for values, factors in zip(flux.faces, _faces(flux.grid, basis, densitised), strict=True):
-        measure = outer(factors)
+    for values, measure in zip(flux.faces, _face_measures(flux.grid, basis, densitised, metric), strict=True):
         out.append(np.divide(values, measure, out=np.zeros_like(values), where=measure != 0))
     return out[0], out[1], out[2]
 
 
-def potential_from_edges(grid: Grid, arrays: Three, basis: Basis) -> EdgePotential:
-    """Circulations from components of a vector potential stored on edges.
-
-    Parameters
-    ----------
-    grid : Grid
-        Cartesian, cylindrical or spherical.
-    arrays : three arrays
-        The component along each edge, shapes (n1, n2 + 1, n3 + 1), (n1 + 1, n2, n3 + 1), (n1 + 1, n2 + 1,
-        n3), unit B L (physical) or B L times the length of one unit of the coordinate (coordinate: covariant
-        A_i).
-    basis : "physical" or "coordinate"
-        On a Cartesian grid both are the same, and so is "cartesian".
-
-    Raises
-    ------
-    DataError
-        If the two copies of a seam differ.
-    FieldError
-        If the grid is of another kind.
-    """
-    edges = [values * outer(factors) for values, factors in zip(arrays, _edges(grid, basis), strict=True)]
-    _check_seams(grid, edges, "edges")
-    three = (edges[0], edges[1], edges[2])
-    close_edges(grid, three)
-    return EdgePotential(grid, three)
-
-
 def cell_density(grid: Grid) -> Array:
-    """sqrt(gamma) at cell centres, shape (n1, n2, n3).
+    """sqrt(gamma) of flat space at cell centres, shape (n1, n2, n3).
+
+    A densitised field over it is a flux density along x, y, z in any metric.
 
     Examples
     --------
@@ -127,6 +105,8 @@ def cell_density(grid: Grid) -> Array:
     >>> cell_density(grid).ravel()
     array([2.])
     """
+    if grid.kind not in _CLOSED:
+        return np.asarray(np.linalg.det(np.moveaxis(centre_jacobian(grid), (0, 1), (-2, -1))))
     return outer(_density(grid, centres=True))
 
 
@@ -158,18 +138,25 @@ def from_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
     if basis == "cartesian" or (grid.kind == "cartesian" and placement(grid) is None):
         return vector
     tangents = np.moveaxis(_tangents(grid, basis), (0, 1), (-2, -1))
-    return np.asarray(
-        np.moveaxis(np.linalg.solve(tangents, np.moveaxis(vector, 0, -1)[..., None])[..., 0], -1, 0)
-    )
+    return np.asarray(np.moveaxis(np.linalg.solve(tangents, np.moveaxis(vector, 0, -1)[..., None])[..., 0], -1, 0))
 
 
 def _tangents(grid: Grid, basis: Basis) -> Array:
     """Vectors along the axes at cell centres, [Cartesian component, axis, i1, i2, i3]."""
-    q1, q2, q3 = (centres_of(nodes) for nodes in grid.nodes)
-    tangents = grid.map.jacobian(q1[:, None, None], q2[None, :, None], q3[None, None, :])
-    if basis == "physical":
-        tangents = tangents / np.sqrt((tangents**2).sum(axis=0))
-    return np.asarray(np.broadcast_to(tangents, (3, 3, *grid.shape)))
+    tangents = centre_jacobian(grid)
+    return np.asarray(tangents / np.sqrt((tangents**2).sum(axis=0)) if basis == "physical" else tangents)
+
+
+def _face_measures(grid: Grid, basis: Basis, densitised: bool, metric: Metric | None) -> Three:
+    """What a stored component is multiplied by on every face."""
+    if metric is not None and basis != "coordinate" and grid.kind != "cartesian":
+        raise FieldError(
+            f"{basis} components on faces of a {grid.kind} grid in curved space: expected coordinate components"
+        )
+    if metric is not None and not densitised:
+        return face_elements(metric, grid)
+    a, b, c = (outer(factors) for factors in _faces(grid, basis, densitised))
+    return a, b, c
 
 
 def _faces(grid: Grid, basis: Basis, densitised: bool) -> tuple[Factors, Factors, Factors]:
@@ -208,21 +195,8 @@ def _density(grid: Grid, centres: bool) -> Factors:
     raise _no_closed_form(grid)
 
 
-def _edges(grid: Grid, basis: Basis) -> tuple[Factors, Factors, Factors]:
-    """What a stored component of the potential is multiplied by, [direction][axis]."""
-    q1, _, _ = grid.nodes
-    d1, d2, d3 = (np.diff(nodes) for nodes in grid.nodes)
-    one1, one2, one3 = (np.ones(nodes.size) for nodes in grid.nodes)
-    if basis == "coordinate" or grid.kind == "cartesian":
-        return (d1, one2, one3), (one1, d2, one3), (one1, one2, d3)
-    if grid.kind == "cylindrical":
-        return (d1, one2, one3), (q1, d2, one3), (one1, one2, d3)
-    if grid.kind == "spherical":
-        return (d1, one2, one3), (q1, d2, one3), (q1, sines(grid), d3)
-    raise _no_closed_form(grid)
-
-
-def _check_seams(grid: Grid, arrays: list[Array], what: str) -> None:
+def check_seams(grid: Grid, arrays: list[Array], what: str) -> None:
+    """Refuse components of a field whose two copies on a seam differ."""
     for axis, seam in enumerate(grid.periodic):
         for component, array in enumerate(arrays):
             if not seam or array.shape[axis] == grid.shape[axis]:

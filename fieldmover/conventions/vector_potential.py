@@ -5,14 +5,46 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.conventions.components import Basis
-from fieldmover.forms.fields import EdgePotential, Three
+from fieldmover.conventions.components import Basis, check_seams
+from fieldmover.forms.fields import EdgePotential, Three, close_edges
 from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, at, quadrature
 
 Array = NDArray[np.float64]
 
 _POINTS = list(zip(*np.polynomial.legendre.leggauss(4), strict=True))
+
+
+def potential_from_edges(grid: Grid, arrays: Three, basis: Basis) -> EdgePotential:
+    """Circulations from components of a vector potential stored on edges, the inverse of `edges_from_potential`.
+
+    Parameters
+    ----------
+    grid : Grid
+    arrays : three arrays
+        The component along each edge, shapes (n1, n2 + 1, n3 + 1), (n1 + 1, n2, n3 + 1), (n1 + 1, n2 + 1, n3), unit B L
+        ("physical") or B L times the length of one unit of the coordinate ("coordinate": covariant A_i).
+    basis : "physical" or "coordinate"
+
+    Raises
+    ------
+    DataError
+        If the two copies of a seam differ.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> grid = fm.cartesian_grid([0, 2], [0, 3], [0, 1])
+    >>> ones = [np.ones(grid.edge_shape(axis)) for axis in range(3)]
+    >>> [float(a[0, 0, 0]) for a in potential_from_edges(grid, (ones[0], ones[1], ones[2]), "physical").edges]
+    [2.0, 3.0, 1.0]
+    """
+    measures = _steps(grid) if basis == "coordinate" else _lengths(grid)
+    edges = [values * measure for values, measure in zip(arrays, measures, strict=True)]
+    check_seams(grid, edges, "edges")
+    three = (edges[0], edges[1], edges[2])
+    close_edges(grid, three)
+    return EdgePotential(grid, three)
 
 
 def edges_from_potential(pot: EdgePotential, basis: Basis) -> Three:

@@ -11,21 +11,22 @@ from fieldmover import compute
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, Three
 from fieldmover.forms.measures import face_factors
-from fieldmover.grids.axes import centres_of, dual_lengths
+from fieldmover.grids.axes import dual_lengths
 from fieldmover.grids.grid import Grid, volume_factors
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
 
 SLAB = 1 << 15  # cells worked on at a time
+FEWEST_ROWS = 8  # of grids whose nodes must be mapped
 
 
 def mean_field(flux: FaceFlux, rows: slice = slice(None)) -> tuple[Array, Array]:
     """Mean field of every cell from its six fluxes, and the cell volumes.
 
-    B = sum over the axes of (mean flux through the two faces) x (vector from one face to the other) / volume.
-    It is the integral of x (B.dS) over the surface, which for a solenoidal field is the integral of B over
-    the cell; it holds beside poles too, where one face carries nothing.
+    B = sum over the axes of (mean flux through the two faces) x (vector from one face to the other) / volume, that
+    vector being the mean of the four edges. It is the integral of x (B.dS) over the surface, which for a solenoidal
+    field is the integral of B over the cell; it holds beside poles too, where one face carries nothing.
 
     Parameters
     ----------
@@ -38,30 +39,19 @@ def mean_field(flux: FaceFlux, rows: slice = slice(None)) -> tuple[Array, Array]
     b : ndarray, shape (3, rows, n2, n3)
         Cartesian components, unit B.
     volumes : ndarray, shape (rows, n2, n3)
-        By the Jacobian at the cell centre, unit L^3.
+        Triple product of the mean edges, unit L^3.
     """
-    b, _, volumes = _mean_field(flux, rows)
+    x = _node_slab(flux.grid, rows)
+    b, volumes = np.empty((3, *(n - 1 for n in x.shape[1:]))), np.empty([n - 1 for n in x.shape[1:]])
+    _means(x, *slab_faces(flux, rows), b, volumes)
     return b, volumes
 
 
-def _mean_field(flux: FaceFlux, rows: slice) -> tuple[Array, Array, Array]:
-    """Mean field, its three parts along the grid axes [axis][Cartesian component], and the volumes."""
-    q1, q2, q3 = (centres_of(nodes) for nodes in flux.grid.nodes)
-    d1, d2, d3 = (np.diff(nodes) for nodes in flux.grid.nodes)
-    steps = (d1[rows, None, None], d2[:, None], d3)
-    j = flux.grid.map.jacobian(q1[rows, None, None], q2[:, None], q3)
-    volumes = np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0))
-    volumes *= steps[0] * steps[1] * steps[2]
-    parts = np.empty((3, 3, *volumes.shape))
-    for axis, (low, high) in enumerate(_both_faces(flux, rows)):
-        parts[axis] = j[:, axis] * (0.5 * (low + high) * steps[axis] / volumes)
-    return parts.sum(axis=0), parts, volumes
-
-
-def _both_faces(flux: FaceFlux, rows: slice) -> list[tuple[Array, Array]]:
-    """Fluxes through the low and the high face of every cell in rows, by axis."""
-    f1, f2, f3 = slab_faces(flux, rows)
-    return [(f1[:-1], f1[1:]), (f2[:, :-1], f2[:, 1:]), (f3[:, :, :-1], f3[:, :, 1:])]
+def _node_slab(grid: Grid, rows: slice) -> Array:
+    """Positions of the nodes of the cells in rows of axis 1."""
+    start, stop, _ = rows.indices(grid.shape[0])
+    q1, q2, q3 = grid.nodes
+    return np.stack(grid.map.to_cartesian(q1[start : stop + 1, None, None], q2[:, None], q3))
 
 
 def slab_faces(flux: FaceFlux, rows: slice) -> tuple[Array, Array, Array]:
@@ -73,7 +63,10 @@ def slab_faces(flux: FaceFlux, rows: slice) -> tuple[Array, Array, Array]:
 def cell_slabs(grid: Grid) -> list[slice]:
     """Rows of axis 1 to work on at a time; they depend on the grid alone."""
     n1, n2, n3 = grid.shape
-    return compute.slabs(n1, SLAB // (n2 * n3))
+    rows = SLAB // (n2 * n3)
+    if volume_factors(grid) is None:  # nodes between slabs are mapped twice
+        rows = max(rows, FEWEST_ROWS)
+    return compute.slabs(n1, rows)
 
 
 @dataclass(frozen=True, eq=False)
@@ -116,11 +109,11 @@ def slab_energies(flux: FaceFlux, weights: CellWeights | None, rows: slice) -> t
     By axis means half the integral of B^i B_i: the energy of the component along the axis where axes are at
     right angles, else a split that adds up to the whole and may have negative parts.
     """
-    if weights is None:
-        b, parts, volumes = _mean_field(flux, rows)
-        return 0.5 * volumes * np.einsum("ac...,c...->a...", parts, b), np.cbrt(volumes)
     faces = slab_faces(flux, rows)
     energies, size = np.empty((3, *faces[0][:-1].shape)), np.empty(faces[0][:-1].shape)
+    if weights is None:
+        _energies_of_means(_node_slab(flux.grid, rows), *faces, energies, size)
+        return energies, np.cbrt(size, out=size)
     (low1, low2, low3), (high1, high2, high3), (s1, s2, s3) = weights.low, weights.high, weights.size
     c12, c13, c21, c23, c31, c32 = weights.cross
     _energies(
@@ -134,9 +127,7 @@ def checked_mask(grid: Grid, mask: Mask, what: str) -> Mask:
     """The mask, or an error that says why it is none for the cells of this grid."""
     mask = np.asarray(mask)
     if mask.shape != grid.shape or mask.dtype != np.bool_:
-        raise FieldError(
-            f"{what}: {mask.dtype} array of shape {mask.shape}, expected bool of shape {grid.shape}"
-        )
+        raise FieldError(f"{what}: {mask.dtype} array of shape {mask.shape}, expected bool of shape {grid.shape}")
     return mask
 
 
@@ -162,3 +153,57 @@ def _energies(f1, f2, f3, low, high, cross, sizes, energies, size):  # type: ign
                 along = l3[k] * f3[i, j, k] ** 2 + h3[k] * f3[i, j, k + 1] ** 2
                 energies[2, i, j, k] = along * c31[i] * c32[j]
                 size[i, j, k] = s1[i] * s2[j] * s3[k]
+
+
+@compute.kernel
+def _mean_edges(p, i, j, k):  # type: ignore[no-untyped-def]
+    """One component of the means of the four edges of a cell along each axis."""
+    a000, a001, a010, a011 = p[i, j, k], p[i, j, k + 1], p[i, j + 1, k], p[i, j + 1, k + 1]
+    a100, a101, a110 = p[i + 1, j, k], p[i + 1, j, k + 1], p[i + 1, j + 1, k]
+    a111 = p[i + 1, j + 1, k + 1]
+    return (
+        0.25 * (((a100 + a101) + (a110 + a111)) - ((a000 + a001) + (a010 + a011))),
+        0.25 * (((a010 + a011) + (a110 + a111)) - ((a000 + a001) + (a100 + a101))),
+        0.25 * (((a001 + a011) + (a101 + a111)) - ((a000 + a010) + (a100 + a110))),
+    )
+
+
+@compute.kernel
+def _means(x, f1, f2, f3, b, volumes):  # type: ignore[no-untyped-def]
+    n1, n2, n3 = volumes.shape
+    px, py, pz = x[0], x[1], x[2]
+    for i in range(n1):
+        for j in range(n2):
+            for k in range(n3):
+                ax, bx, cx = _mean_edges(px, i, j, k)
+                ay, by, cy = _mean_edges(py, i, j, k)
+                az, bz, cz = _mean_edges(pz, i, j, k)
+                volume = ax * (by * cz - bz * cy) + ay * (bz * cx - bx * cz) + az * (bx * cy - by * cx)
+                m1, m2 = f1[i, j, k] + f1[i + 1, j, k], f2[i, j, k] + f2[i, j + 1, k]
+                m3 = f3[i, j, k] + f3[i, j, k + 1]
+                volumes[i, j, k] = volume
+                b[0, i, j, k] = 0.5 * (m1 * ax + m2 * bx + m3 * cx) / volume
+                b[1, i, j, k] = 0.5 * (m1 * ay + m2 * by + m3 * cy) / volume
+                b[2, i, j, k] = 0.5 * (m1 * az + m2 * bz + m3 * cz) / volume
+
+
+@compute.kernel
+def _energies_of_means(x, f1, f2, f3, energies, volumes):  # type: ignore[no-untyped-def]
+    n1, n2, n3 = volumes.shape
+    px, py, pz = x[0], x[1], x[2]
+    for i in range(n1):
+        for j in range(n2):
+            for k in range(n3):
+                ax, bx, cx = _mean_edges(px, i, j, k)
+                ay, by, cy = _mean_edges(py, i, j, k)
+                az, bz, cz = _mean_edges(pz, i, j, k)
+                volume = ax * (by * cz - bz * cy) + ay * (bz * cx - bx * cz) + az * (bx * cy - by * cx)
+                m1, m2 = f1[i, j, k] + f1[i + 1, j, k], f2[i, j, k] + f2[i, j + 1, k]
+                m3 = f3[i, j, k] + f3[i, j, k + 1]
+                x4, y4 = m1 * ax + m2 * bx + m3 * cx, m1 * ay + m2 * by + m3 * cy
+                z4 = m1 * az + m2 * bz + m3 * cz
+                weight = 0.125 / volume
+                volumes[i, j, k] = volume
+                energies[0, i, j, k] = weight * m1 * (x4 * ax + y4 * ay + z4 * az)
+                energies[1, i, j, k] = weight * m2 * (x4 * bx + y4 * by + z4 * bz)
+                energies[2, i, j, k] = weight * m3 * (x4 * cx + y4 * cy + z4 * cz)

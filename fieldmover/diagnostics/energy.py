@@ -11,7 +11,8 @@ from numpy.typing import ArrayLike, NDArray
 
 from fieldmover import compute
 from fieldmover.diagnostics.cells import Mask, cell_slabs, cell_weights, checked_mask, slab_energies
-from fieldmover.errors import FieldError, GridError
+from fieldmover.diagnostics.regions import distance
+from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux
 from fieldmover.grids.grid import Grid
 
@@ -78,6 +79,7 @@ def energy_in(flux: FaceFlux, where: Mask) -> float:
     >>> import fieldmover as fm
     >>> grid = fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1])
     >>> flux = fm.flux_from_function(grid, lambda x, y, z: (0 * x, 0 * y, 2 + 0 * z))
+    >>> from fieldmover.diagnostics import box_cells
     >>> round(energy_in(flux, box_cells(grid, (0, 0, 0), (1, 1, 1))), 12)
     2.0
     """
@@ -116,7 +118,7 @@ def energy_by_shell(flux: FaceFlux, radii: ArrayLike, centre: ArrayLike = (0.0, 
     edges = np.asarray(radii, dtype=np.float64)
     if edges.ndim != 1 or edges.size < 2 or not (np.diff(edges) > 0).all():
         raise FieldError(f"radii of shells: {edges.tolist()}, expected two or more, increasing")
-    shell = np.searchsorted(edges, _distance(flux.grid, centre), side="right").ravel()
+    shell = np.searchsorted(edges, distance(flux.grid, centre), side="right").ravel()
     sums = np.bincount(shell, weights=cell_energies(flux).ravel(), minlength=edges.size + 1)
     return np.asarray(sums[1 : edges.size])
 
@@ -202,57 +204,7 @@ def power_spectrum(grid: Grid, b: Array) -> tuple[Array, Array]:
     return np.asarray(2 * np.pi / longest * np.arange(energy.size), dtype=np.float64), energy
 
 
-def box_cells(grid: Grid, low: ArrayLike, high: ArrayLike) -> Mask:
-    """Cells whose centre lies in the box between two Cartesian corners.
-
-    Raises
-    ------
-    GridError
-        If there are none.
-
-    Examples
-    --------
-    >>> import fieldmover as fm
-    >>> box_cells(fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1]), (0, 0, 0), (1, 1, 1)).ravel()
-    array([ True, False])
-    """
-    a, b = (np.asarray(corner, dtype=np.float64)[:, None, None, None] for corner in (low, high))
-    x = grid.centres()
-    inside = np.asarray(((x >= a) & (x <= b)).all(axis=0))
-    return _some(inside, grid, f"box from {low!r} to {high!r}")
-
-
-def shell_cells(grid: Grid, inner: float, outer: float, centre: ArrayLike = (0.0, 0.0, 0.0)) -> Mask:
-    """Cells whose centre lies between two spheres; a ball with inner = 0.
-
-    Raises
-    ------
-    GridError
-        If there are none.
-
-    Examples
-    --------
-    >>> import fieldmover as fm
-    >>> shell_cells(fm.cartesian_grid([0, 1, 2], [-1, 1], [-1, 1]), 1.0, 2.0).ravel()
-    array([False,  True])
-    """
-    r = _distance(grid, centre)
-    return _some((r >= inner) & (r < outer), grid, f"shell of radii {inner} and {outer} round {centre!r}")
-
-
 def _vectors(grid: Grid, b: Array) -> Array:
     if np.shape(b) != (3, *grid.shape):
         raise FieldError(f"cell-centred field: shape {np.shape(b)}, expected {(3, *grid.shape)}")
     return b
-
-
-def _distance(grid: Grid, centre: ArrayLike) -> Array:
-    """Distance of every cell centre from a point."""
-    gap = grid.centres() - np.asarray(centre, dtype=np.float64)[:, None, None, None]
-    return np.asarray(np.sqrt((gap**2).sum(axis=0)))
-
-
-def _some(mask: Mask, grid: Grid, what: str) -> Mask:
-    if not mask.any():
-        raise GridError(f"{what}: no cell centre of {grid!r} lies inside")
-    return mask

@@ -8,7 +8,7 @@ from typing import Any
 from fieldmover.diagnostics.cells import Mask
 from fieldmover.diagnostics.divergence import Index, Norms, Point, centre_at, tally, unravelled
 from fieldmover.diagnostics.limits import finite
-from fieldmover.diagnostics.surfaces import Wall, closed_walls
+from fieldmover.diagnostics.walls import Wall, closed_walls
 from fieldmover.forms.fields import FaceFlux
 
 

@@ -103,9 +103,7 @@ def write_demo(folder: Path, overwrite: bool = False, cells: tuple[int, int, int
         ours = job.exists() and job.read_text(encoding="utf-8", errors="replace") == job_text()
         taken = [name for name in (JOB, SNAPSHOT, OUTPUT) if (folder / name).exists()]
         if taken and not (ours or overwrite):
-            raise JobError(
-                f"{folder / taken[0]}: exists and is not of this demo; give another folder or --overwrite"
-            )
+            raise JobError(f"{folder / taken[0]}: exists and is not of this demo; give another folder or --overwrite")
         folder.mkdir(parents=True, exist_ok=True)
         job.write_text(job_text(), encoding="utf-8")
         write_snapshot(folder / SNAPSHOT, cells)

@@ -1,4 +1,4 @@
-"""Figures that fill a curve or a list: histogram, worst cells, profile, spectrum."""
+"""Figures that fill a curve, a list or a table: histogram, worst cells, profile, spectrum, helicity."""
 
 from __future__ import annotations
 
@@ -8,10 +8,18 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.diagnostics import WorstCell, power_spectrum, relative_divergence, worst_cells
+from fieldmover.diagnostics import (
+    WorstCell,
+    power_spectrum,
+    relative_divergence,
+    relative_helicity,
+    worst_cells,
+)
 from fieldmover.diagnostics.limits import finite
-from fieldmover.errors import FieldError
+from fieldmover.diagnostics.solenoidal import with_potential
+from fieldmover.errors import ChargeError, FieldError
 from fieldmover.forms.fields import FaceFlux
+from fieldmover.forms.incidence import d1
 from fieldmover.grids.grid import Grid
 
 Array = NDArray[np.float64]
@@ -61,8 +69,7 @@ def profile(grid: Grid, energies: Mapping[str, Array]) -> dict[str, Any]:
     bounds = np.linspace(r.min(), r.max(), SHELLS + 1)
     shell = np.clip(np.searchsorted(bounds, r, side="right") - 1, 0, SHELLS - 1)
     sums = {
-        step: np.bincount(shell, weights=cells.ravel(), minlength=SHELLS).tolist()
-        for step, cells in energies.items()
+        step: np.bincount(shell, weights=cells.ravel(), minlength=SHELLS).tolist() for step, cells in energies.items()
     }
     return {"radii": bounds.tolist(), "energy": sums}
 
@@ -94,3 +101,15 @@ def divergences(fluxes: Mapping[str, FaceFlux]) -> dict[str, dict[str, Any]]:
 
 def _numbers(worst: WorstCell) -> dict[str, float | None]:
     return {"relative": finite(worst.relative), "net": finite(worst.net)}
+
+
+def helicity_figures(flux: FaceFlux) -> dict[str, float | None] | str:
+    """Relative helicity of a field, less what divergence it has; or why that has no meaning."""
+    try:
+        pot, _ = with_potential(flux)
+        if pot is None:
+            return "a closed surface carries net flux, so there is no vector potential"
+        found = relative_helicity(FaceFlux(flux.grid, d1(pot.edges)))
+    except ChargeError as error:
+        return str(error)
+    return {name: finite(value) for name, value in found.as_dict().items()}

@@ -2,7 +2,7 @@
 
 A density becomes the content of its cell, which is moved so that the total stays. A quantity per unit mass
 travels as mass times quantity and is divided by the mass that arrived, so its mass-weighted sum stays too.
-Where the source does not reach, a constant fills the part of each cell that is left, and what that adds is
+Where the source does not reach, a background fills the part of each cell that is left, and what that adds is
 counted.
 """
 
@@ -13,82 +13,152 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.forms.fields import CellContent
+from fieldmover.expressions import Expression
+from fieldmover.forms.fields import CellContent, FaceFlux
 from fieldmover.interpolation.fluid import FluidPlan
+from fieldmover.jobs.formulas import Values, background, evaluated
 from fieldmover.jobs.read import State
-from fieldmover.jobs.schema import MASS, Job
+from fieldmover.jobs.schema import MASS, VELOCITY, Job, formula_names, plain
+from fieldmover.jobs.space import Space
 
 Array = NDArray[np.float64]
 
 
-def move_fluid(job: Job, source: State, plan: FluidPlan) -> dict[str, Array]:
+def move_fluid(job: Job, source: State, space: Space, plan: FluidPlan, flux: FaceFlux) -> dict[str, Array]:
     """Every quantity that the target asks for, on the target; vectors in Cartesian components.
 
     Parameters
     ----------
     job : Job
     source : State
+    space : Space
+        Of the target.
     plan : FluidPlan
         From the source's grid to the target's.
+    flux : FaceFlux
+        On the target, for formulas.
     """
-    wanted, carry = job.target.fluid, {name: quantity.carry for name, quantity in job.source.fluid.items()}
-    fluid = {
-        name: _density(source, plan, name, wanted[name].outside)
-        for name in wanted
-        if carry[name] == "conserve"
-    }
-    by_mass = [name for name in wanted if carry[name] == "by mass"]
-    if by_mass:
-        background = wanted[MASS].outside if MASS in wanted else 0.0
-        mass = _content(source, MASS)
-        for name in by_mass:
-            arrived, values = plan.move_by_mass(mass, source.fluid[name])
-            added = background * _left(plan)
-            whole = arrived.cells + added
-            mixed = values * arrived.cells + wanted[name].outside * added
-            outside = np.full_like(values, wanted[name].outside)
-            fluid[name] = np.divide(mixed, whole, out=outside, where=whole > 0)
-    return fluid
+    moved = _Moved(job, source, space, plan)
+    fluid = {name: moved.quantity(name) for name in _to_move(job, space)}
+    values = Values(fluid, flux)
+    for name, wanted in job.target.fluid.items():
+        if wanted.formula is not None:
+            fluid[name] = evaluated(Expression(wanted.formula, values.names), values, f"target.fluid.{name}")
+    kept = [*job.target.fluid, *([VELOCITY] if VELOCITY in fluid else [])]
+    return {name: fluid[name] for name in dict.fromkeys(kept)}
 
 
-def totals(job: Job, source: State, plan: FluidPlan, stored: dict[str, Array]) -> dict[str, dict[str, Any]]:
+def totals(
+    job: Job, source: State, plan: FluidPlan, stored: State, cured_mass: float = 0.0
+) -> dict[str, dict[str, Any]]:
     """What became of the total of every conserved scalar.
+
+    Parameters
+    ----------
+    job, source, plan
+        As `move_fluid`.
+    stored : State
+        The numbers in the file.
+    cured_mass : float
+        What floors and ceilings have added to the mass, which is told apart.
 
     Returns
     -------
     dict
-        For each: "source", all of it; "moved", what arrived; "added_outside", what the constant outside the
-        source added; "stored", the total of the numbers in the file; "change", of stored less added against
-        moved.
+        For each: "source", all of it; "moved", what arrived; "added_outside", what the background outside the
+        source added; "added_by_cure"; "stored", the total of the numbers in the file; "change", of stored less what
+        was added, against moved.
     """
     found = {}
-    volumes = plan.target.cell_volumes()
-    for name, wanted in job.target.fluid.items():
-        if job.source.fluid[name].carry != "conserve":
-            continue
-        content = _content(source, name)
-        moved = float(plan.move(content).cells.sum())
-        added = wanted.outside * float(_left(plan).sum())
-        kept = float((stored[name] * volumes).sum())
+    moved = _Moved(job, source, stored.space, plan)
+    for name in job.conserved:
+        content = source.fluid[name] * source.elements
+        arrived = float(moved.content(name).sum())
+        added = float(np.sum(moved.outside(name) * moved.left))
+        cured = cured_mass if name == MASS else 0.0
+        kept = float((stored.fluid[name] * stored.elements).sum())
         found[name] = {
-            "source": float(content.cells.sum()),
-            "moved": moved,
+            "source": float(content.sum()),
+            "moved": arrived,
             "added_outside": added,
+            "added_by_cure": cured,
             "stored": kept,
-            "change": abs(kept - added - moved) / moved if moved > 0 else None,
+            "change": abs(kept - added - cured - arrived) / arrived if arrived > 0 else None,
         }
     return found
 
 
-def _content(source: State, name: str) -> CellContent:
-    return CellContent(source.grid, source.fluid[name] * source.grid.cell_volumes())
+def _to_move(job: Job, space: Space) -> list[str]:
+    """Names of what is moved, the velocity first: densities are told from contents by its Lorentz factor."""
+    carried = job.source.fluid
+    names = {name for name, wanted in job.target.fluid.items() if wanted.formula is None}
+    used = {
+        part
+        for wanted in job.target.fluid.values()
+        if wanted.formula is not None
+        for part in Expression(wanted.formula, formula_names(dict(carried))).names
+    }
+    for name, quantity in carried.items():
+        parts = [f"{plain(name)}_{axis}" for axis in "xyz"] if quantity.vector else [plain(name)]
+        if used.intersection(parts):
+            names.add(name)
+    if space.geometry is not None and VELOCITY in carried and any(carried[n].carry == "conserve" for n in names):
+        names.add(VELOCITY)
+    return sorted(names, key=lambda name: name != VELOCITY)
 
 
-def _left(plan: FluidPlan) -> Array:
-    """Volume of each target cell that the source does not reach."""
-    return np.asarray((1.0 - plan.coverage) * plan.target.cell_volumes())
+class _Moved:
+    """Quantities as they arrive, each moved once."""
 
+    def __init__(self, job: Job, source: State, space: Space, plan: FluidPlan) -> None:
+        self._job, self._source, self._space, self._plan = job, source, space, plan
+        self._contents: dict[str, Array] = {}
+        self._velocity: Array | None = None
 
-def _density(source: State, plan: FluidPlan, name: str, outside: float) -> Array:
-    moved = plan.move(_content(source, name)).cells
-    return np.asarray((moved + outside * _left(plan)) / plan.target.cell_volumes())
+    @property
+    def left(self) -> Array:
+        """Volume of each target cell that the source does not reach."""
+        return np.asarray((1.0 - self._plan.coverage) * self._space.volumes)
+
+    def outside(self, name: str) -> Array | float:
+        """The background of a quantity: of a vector an array of shape (3, ...)."""
+        wanted = self._job.target.fluid.get(name)
+        if wanted is None:
+            return 0.0
+        where = f"target.fluid.{name}.outside"
+        if isinstance(wanted.outside, list):
+            shape = self._plan.target.shape
+            parts = [background(value, self._plan.target, where) for value in wanted.outside]
+            return np.stack([np.broadcast_to(part, shape) for part in parts])
+        return background(wanted.outside, self._plan.target, where)
+
+    def content(self, name: str) -> Array:
+        """Content of a density in each target cell."""
+        if name not in self._contents:
+            self._contents[name] = self._plan.move(self._source_content(name)).cells
+        return self._contents[name]
+
+    def quantity(self, name: str) -> Array:
+        """A quantity on the target, background included."""
+        carry = self._job.source.fluid[name].carry
+        found = self._density(name) if carry == "conserve" else self._by_mass(name)
+        if name == VELOCITY:
+            self._velocity = found
+        return found
+
+    def _source_content(self, name: str) -> CellContent:
+        return CellContent(self._source.grid, self._source.fluid[name] * self._source.elements)
+
+    def _density(self, name: str) -> Array:
+        whole = self.content(name) + self.outside(name) * self.left
+        return np.asarray(whole / self._space.elements(self._velocity))
+
+    def _by_mass(self, name: str) -> Array:
+        mass = self._source_content(MASS)
+        arrived, values = self._plan.move_by_mass(mass, self._source.fluid[name])
+        self._contents[MASS] = arrived.cells
+        added = (self.outside(MASS) if MASS in self._job.target.fluid else 0.0) * self.left
+        whole = arrived.cells + added
+        outside = self.outside(name)
+        mixed = values * arrived.cells + outside * added
+        return np.divide(mixed, whole, out=np.zeros_like(values) + outside, where=whole > 0)

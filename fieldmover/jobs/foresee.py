@@ -53,9 +53,7 @@ def foresee(loaded: Loaded, command: str, folder: Path | None = None, overwrite:
         check_output(loaded, overwrite)
         check_space(loaded.target, bytes_needed(loaded, target.shape))
         verb = "replaces" if loaded.target.exists() else "writes"
-        lines.append(
-            f"{verb} {loaded.target}, about {bytes_needed(loaded, target.shape) / 1e6:.1f} MB on {target!r}"
-        )
+        lines.append(f"{verb} {loaded.target}, about {bytes_needed(loaded, target.shape) / 1e6:.1f} MB on {target!r}")
         if loaded.job.target.view:
             lines.append(f"{verb} {sidecar(loaded.target)}")
     elif loaded.target.exists():

@@ -101,11 +101,8 @@ def guess(items: Sequence[Item], read: Callable[[str], Array]) -> Guess:
     if found.magnetic and found.axes:
         _layout(found, [boxes[name] for name in found.magnetic], [lines[name] for name in found.axes])
         _ghosts(found, [read(name) for name in found.axes], items, read)
-    times = [
-        item.name
-        for item in items
-        if re.fullmatch(r"(?i)time|t", _last(item.name)) and np.prod(item.shape) == 1
-    ]
+    _others(found, boxes)
+    times = [item.name for item in items if re.fullmatch(r"(?i)time|t", _last(item.name)) and np.prod(item.shape) == 1]
     if times:
         found.time = times[0]
         found.say("time", "likely", f"{times[0]} is one number of that name")
@@ -129,9 +126,7 @@ def _axes(found: Guess, names: list[str]) -> None:
             if kind:
                 found.say("grid", "likely", f"{kind}: {shown} increase and are called so")
             else:
-                found.say(
-                    "grid", "guess", f"{shown} look like positions; the kind of the grid cannot be seen"
-                )
+                found.say("grid", "guess", f"{shown} look like positions; the kind of the grid cannot be seen")
             return
     found.say("grid", "guess", "no three increasing one-dimensional datasets with names of axes")
 
@@ -142,9 +137,7 @@ def _is_axis(name: str, options: tuple[str, ...]) -> bool:
 
 def _best(names: list[str]) -> str:
     """Nodes rather than centres, else the first."""
-    return next(
-        (name for name in names if re.search(r"(?:f|faces?|nodes?|edges?|if)$", name, re.I)), names[0]
-    )
+    return next((name for name in names if re.search(r"(?:f|faces?|nodes?|edges?|if)$", name, re.I)), names[0])
 
 
 def _fields(found: Guess, boxes: Mapping[str, tuple[int, ...]]) -> None:
@@ -157,9 +150,7 @@ def _fields(found: Guess, boxes: Mapping[str, tuple[int, ...]]) -> None:
         what = "vector potential" if found.potential else "magnetic field"
         found.say(what, "likely", f"{', '.join(found.magnetic)} are called so")
     else:
-        found.say(
-            "magnetic field", "guess", "no three three-dimensional datasets with names of its components"
-        )
+        found.say("magnetic field", "guess", "no three three-dimensional datasets with names of its components")
     for name in boxes:
         if re.fullmatch(rf"(?i){SCALARS['density']}", _last(name)):
             found.density = name
@@ -167,6 +158,17 @@ def _fields(found: Guess, boxes: Mapping[str, tuple[int, ...]]) -> None:
             break
     if found.velocity:
         found.say("velocity", "likely", f"{', '.join(found.velocity)} are called so")
+
+
+def _others(found: Guess, boxes: Mapping[str, tuple[int, ...]]) -> None:
+    """What lies on the same grid and was not recognised."""
+    used = {*found.magnetic, *found.velocity, found.density}
+    shapes = {boxes[name] for name in (*found.magnetic, *found.velocity, found.density) if name}
+    left = [name for name, shape in boxes.items() if name not in used and shape in shapes]
+    if left:
+        found.say(
+            "left out", "sure", f"{', '.join(left)}: as large as the rest; name them in source.fluid if they are to go"
+        )
 
 
 def _triple(boxes: Mapping[str, tuple[int, ...]], bases: str, sets: list) -> Triple | tuple[()]:
@@ -219,26 +221,18 @@ def _layout(found: Guess, shapes: list[tuple[int, ...]], lengths: list[int]) -> 
     why = f"shape {shown} against {lengths} positions"
     others = [fit[1] for fit in fits if fit[1] != found.order]
     sure = "guess" if len(orders) > 1 else "likely" if others else "sure"
-    found.say(
-        "axes as stored", sure, f"{found.order}: {why}" + (f"; {others[0]} would fit too" if others else "")
-    )
+    found.say("axes as stored", sure, f"{found.order}: {why}" + (f"; {others[0]} would fit too" if others else ""))
     found.say("where values sit", "sure" if len(best) == len(orders) else "likely", f"{found.at}: {why}")
     found.say("positions", "sure", "cell centres" if found.centres else "nodes: one more than cells")
 
 
-def _ghosts(
-    found: Guess, positions: list[Array], items: Sequence[Item], read: Callable[[str], Array]
-) -> None:
+def _ghosts(found: Guess, positions: list[Array], items: Sequence[Item], read: Callable[[str], Array]) -> None:
     """Ghosts that the positions include: seen in angles, told by an attribute, else as on the other axes."""
     if any(found.ghosts):
         found.say("ghosts", "likely", f"{found.ghosts}: the arrays have more cells than the positions")
         return
     seen = [_outside(found.kind, axis, q, found.centres) for axis, q in enumerate(positions)]
-    told = [
-        item.name
-        for item in items
-        if re.fullmatch(GHOSTS, _last(item.name), re.I) and np.prod(item.shape) == 1
-    ]
+    told = [item.name for item in items if re.fullmatch(GHOSTS, _last(item.name), re.I) and np.prod(item.shape) == 1]
     if told:
         count = int(read(told[0]).reshape(-1)[0])
         found.ghosts = [count] * 3
@@ -264,11 +258,7 @@ def _outside(kind: str | None, axis: int, q: Array, centres: bool) -> int | None
     if (kind, axis) in (("spherical", 2), ("cylindrical", 1)):
         for count in range(min(MOST_GHOSTS, (q.size - 2) // 2) + 1):
             inner = q[count : q.size - count]
-            span = (
-                inner[-1]
-                - inner[0]
-                + (0.5 * (inner[1] - inner[0] + inner[-1] - inner[-2]) if centres else 0.0)
-            )
+            span = inner[-1] - inner[0] + (0.5 * (inner[1] - inner[0] + inner[-1] - inner[-2]) if centres else 0.0)
             if abs(span - 2 * np.pi) < CLOSE * 10:
                 return count
     return None

@@ -13,7 +13,7 @@ from typing import Any, get_args
 from pydantic import BaseModel, ValidationError
 
 from fieldmover.errors import JobError
-from fieldmover.jobs.schema import TAGS, Job
+from fieldmover.jobs.schema import TAGS, Job, mistakes
 
 Place = tuple[str | int, ...]
 
@@ -75,14 +75,14 @@ def load(path: Path, changes: Sequence[str] = ()) -> Loaded:
     except tomllib.TOMLDecodeError as error:
         raise JobError(f"{path}: not TOML: {error}") from None
     changed = [_apply(values, change) for change in changes]
-    mistakes: list[tuple[Place, str]]
+    told: list[tuple[Place, str]]
     try:
         job = Job.model_validate(values)
-        mistakes = list(job.mistakes())
+        told = list(mistakes(job))
     except ValidationError as error:
-        mistakes = [_explained(found) for found in error.errors(include_url=False)]
-    if mistakes:
-        lines = [_located(place, message, text, changed) for place, message in mistakes]
+        told = [_explained(found) for found in error.errors(include_url=False)]
+    if told:
+        lines = [_located(place, message, text, changed) for place, message in told]
         count = "1 mistake" if len(lines) == 1 else f"{len(lines)} mistakes"
         raise JobError("\n  ".join([f"{path}: {count}", *lines]))
     return Loaded(job, path, text, tuple(changes))
@@ -97,9 +97,7 @@ def _apply(values: dict[str, Any], change: str) -> Place:
     try:
         new = tomllib.loads(f"value = {value}")["value"]
     except tomllib.TOMLDecodeError:
-        raise JobError(
-            f"--set {change}: {value!r} is not a TOML value; text needs quotes: {key}='\"...\"'"
-        ) from None
+        raise JobError(f"--set {change}: {value!r} is not a TOML value; text needs quotes: {key}='\"...\"'") from None
     table = values
     for part in parts[:-1]:
         table = table.setdefault(part, {})

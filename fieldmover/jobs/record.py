@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover._version import __version__
-from fieldmover.diagnostics import compare_fluxes, diagnose, differences
+from fieldmover.diagnostics import compare_fields, compare_fluxes, diagnose, differences
+from fieldmover.diagnostics.cells import same_place
 from fieldmover.diagnostics.limits import finite
 from fieldmover.forms.fields import FaceFlux
 from fieldmover.jobs.load import Loaded
@@ -46,7 +47,7 @@ class Record:
     def __init__(self, loaded: Loaded, command: str) -> None:
         job = loaded.job
         self._limits, self._folder = job.limits, loaded.path.parent
-        self.names = known(job.conserved, job.regions)
+        self.names = known(job.conserved, job.regions, job.surfaces)
         self.values: dict[str, Any] = {
             "schema": SCHEMA,
             "command": command,
@@ -57,7 +58,19 @@ class Record:
             "figures": {"divergence": None, "energy_change": None, "mass_change": None, "energy_lost": {}},
             "fields": {},
             "regions": {},
+            "surfaces": {},
+            "surfaces_meant": {},
+            "stencil": None,
+            "helicity": {},
+            "helicity_missing": {},
+            "gas": {},
+            "extremes": {},
+            "extremes_at": {},
+            "agreement": None,
             "cleaning": None,
+            "stencil_cleaning": None,
+            "side_by_side": None,
+            "health": [],
             "coverage": None,
             "energy_covered": {},
             "fluid": {},
@@ -97,6 +110,11 @@ class Record:
         self.values["fields"][step] = {"grid": repr(flux.grid), **found}
         self.values["figures"]["divergence"] = found["divergence"]["linf"]
 
+    def stencil(self, found: dict[str, Any]) -> None:
+        """Divergence of the stored numbers as the receiving code takes it; limits hold for it."""
+        self.values["stencil"] = found
+        self.values["figures"]["divergence"] = found["linf"]
+
     def cleaning(self, found: dict[str, Any]) -> None:
         """What the removal of monopoles did."""
         self.values["cleaning"] = found
@@ -128,9 +146,12 @@ class Record:
         self.values["figures"]["mass_change"] = totals[MASS]["change"] if MASS in totals else None
 
     def against(self, other: FaceFlux, stored: FaceFlux) -> None:
-        """The field as stored, and its figures, against those of another file on the same grid."""
+        """The field as stored, and its figures, against those of another file, where the grids overlap."""
         figures = differences(diagnose(other).as_dict(), self.values["fields"]["stored"])
-        field = compare_fluxes(other, stored).as_dict()
+        if same_place(other.grid, stored.grid):
+            field = {**compare_fluxes(other, stored).as_dict(), "overlap": 1.0}
+        else:
+            field = compare_fields(other, stored).as_dict()
         self.values["against"] = {"figures": {name: vars(found) for name, found in figures.items()}}
         self.values["figures"]["against"] = field
 

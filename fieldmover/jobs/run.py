@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 import fieldmover as fm
-from fieldmover.diagnostics import cell_energies, relative_divergence
+from fieldmover.diagnostics import Surface, cell_energies, relative_divergence
 from fieldmover.errors import JobError
 from fieldmover.forms.fields import CellContent, FaceFlux
 from fieldmover.grids.grid import Grid
@@ -19,11 +19,13 @@ from fieldmover.jobs.cleaning import cleaned
 from fieldmover.jobs.details import divergences, profile, spectra
 from fieldmover.jobs.fluid import move_fluid, totals
 from fieldmover.jobs.grids import target_grid
+from fieldmover.jobs.health import cured, mass_added
 from fieldmover.jobs.load import Loaded
+from fieldmover.jobs.measure import cell_values, measure_gas, measure_more, measure_stencil, other_field
 from fieldmover.jobs.progress import Progress
-from fieldmover.jobs.read import State, read_source, read_target
+from fieldmover.jobs.read import State, read_cells, read_source, read_target, target_space
 from fieldmover.jobs.record import Record
-from fieldmover.jobs.regions import Cells, Mask, region_figures, region_masks
+from fieldmover.jobs.regions import Cells, by_place, region_figures, region_masks, surfaces_of
 from fieldmover.jobs.store import Store, bytes_needed
 from fieldmover.jobs.supervise import note
 from fieldmover.jobs.verdicts import limits_table
@@ -55,7 +57,7 @@ class Work:
     progress: Progress
     folder: Path
     planes: list[Plane]
-    regions: dict[str, Mask]
+    surfaces: dict[str, Surface]
 
 
 def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False) -> Outcome:
@@ -82,6 +84,7 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
     """
     target = target_grid(loaded)
     check_output(loaded, overwrite)
+    space = target_space(loaded, target)
     check_space(loaded.target, bytes_needed(loaded, target.shape))
     work = _work(loaded, "move", target, folder, Progress(7, quiet))
     job, record, progress = loaded.job, work.record, work.progress
@@ -96,7 +99,8 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
             record.field("moved", flux)
     with progress.stage("moving the fluid"):
         plan = FluidPlan(source.grid, target)
-        moved = State(loaded.target, flux, move_fluid(job, source, plan), source.time)
+        fluid = move_fluid(job, source, space, plan, flux)
+        moved, record.values["health"] = cured(loaded, State(loaded.target, flux, space, fluid, source.time))
     return _store(work, source, moved, plan, {"cleaned": clean_flux, "moved": flux}, overwrite)
 
 
@@ -130,7 +134,7 @@ def clean(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, q
         record.field("cleaned", flux)
         plan = FluidPlan(source.grid, source.grid)
         fluid = {name: source.fluid[name] for name in job.target.fluid}
-        state = State(loaded.target, flux, fluid, source.time)
+        state, record.values["health"] = cured(loaded, State(loaded.target, flux, source.space, fluid, source.time))
     return _store(work, source, state, plan, {"cleaned": flux}, overwrite)
 
 
@@ -169,18 +173,23 @@ def check(
     progress, record = Progress(3, quiet), Record(loaded, "check")
     with progress.stage("reading"):
         source = _source(loaded, record)
-        grid = source.grid if loaded.job.target.grid is None else target_grid(loaded)
-        stored = read_target(loaded, grid) if there else source
+        clean = loaded.job.target.grid is None
+        space = source.space if clean else target_space(loaded, target_grid(loaded))
+        stored = read_target(loaded, space) if there else source
         if there:
             record.file("target", loaded.target)
     work = _work(loaded, "check", stored.grid, folder, progress, record)
     with progress.stage("measuring"):
         if there:
             record.field("stored", stored.flux)
+            measure_stencil(record, loaded, space.grid, read_cells(loaded, space.grid))
             _compare(work, source, stored, FluidPlan(source.grid, stored.grid), {})
+        else:
+            measure_more(record, loaded, {"source": source}, work.surfaces)
         if against is not None:
-            record.file("other", against)
-            record.against(read_target(loaded, grid, against).flux, stored.flux)
+            path, other = other_field(loaded, space, against)
+            record.file("other", path)
+            record.against(other, stored.flux)
     outcome = _finish(work, source, stored if there else None)
     if make_limits is None:
         return outcome
@@ -221,9 +230,10 @@ def _work(
     """What the job wants to see on a grid; mistakes in it are told before the work."""
     folder = folder or report_folder(loaded)
     check_folder(folder)
+    region_masks(grid, by_place(loaded.job))  # one that misses the grid is told before the work
     return Work(
         loaded, record or Record(loaded, command), progress, folder, _planes(loaded, grid),
-        region_masks(grid, loaded.job.regions),
+        surfaces_of(loaded.job.surfaces, grid),
     )  # fmt: skip
 
 
@@ -256,6 +266,7 @@ def _store(
         with progress.stage("measuring"):
             stored = store.read_state(moved)
             record.field("stored", stored.flux)
+            measure_stencil(record, loaded, stored.grid, store.read_cells())
             _compare(work, source, stored, plan, steps)
             record.finish(progress)
         store.write_report(to_json(record.values))
@@ -281,10 +292,12 @@ def _compare(work: Work, source: State, stored: State, plan: FluidPlan, steps: d
             cells[name] = found
     record.energies(energies)
     record.values["profile"] = profile(stored.grid, {step: np.where(whole, e, 0.0) for step, e in cells.items()})
-    if work.regions:
+    measure_more(record, work.loaded, {"source": source, "stored": stored}, work.surfaces)
+    measure_gas(record, source, stored, plan)
+    if regions := region_masks(stored.grid, work.loaded.job.regions, cell_values(stored, cells["stored"] / volumes)):
         figures = Cells(relative_divergence(stored.flux), cells["stored"], cells["source"], whole, volumes)
-        record.values["regions"] = {name: region_figures(figures, mask) for name, mask in work.regions.items()}
-    record.fluid(totals(work.loaded.job, source, plan, stored.fluid))
+        record.values["regions"] = {name: region_figures(figures, mask) for name, mask in regions.items()}
+    record.fluid(totals(work.loaded.job, source, plan, stored, mass_added(record.values["health"])))
 
 
 def _finish(work: Work, source: State, stored: State | None) -> Outcome:

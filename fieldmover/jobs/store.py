@@ -15,9 +15,10 @@ from fieldmover.conventions.vector_potential import cells_from_potential, edges_
 from fieldmover.diagnostics import relative_divergence
 from fieldmover.errors import GridError, JobError
 from fieldmover.forms.fields import FaceFlux
-from fieldmover.grids.placement import placement, turned, unplaced
 from fieldmover.jobs.load import Loaded
-from fieldmover.jobs.read import State, flux_from_stored
+from fieldmover.jobs.read import State, basis_of, flux_from_stored, quantity_from_stored
+from fieldmover.jobs.schema import VELOCITY, TargetQuantity
+from fieldmover.jobs.space import coordinate_volumes
 from fieldmover.projection.cells import project_cells
 from fieldmover.projection.potential import potential
 from fieldmover.snapshots.layout import Layout
@@ -45,6 +46,7 @@ class Store:
         self._target = loaded.job.target
         self._output = output
         self._layout = Layout(self._target.axes)
+        self._same_units = loaded.job.units is None
         self.stencil_cleaning: dict[str, Any] | None = None  # what it took to suit the stencil of the receiver
         self._type = np.float32 if self._target.precision == "single" else np.float64
 
@@ -52,13 +54,13 @@ class Store:
         """Magnetic field and fluid, and our own nodes and job text."""
         magnetic = self._target.magnetic
         basis = magnetic.basis or "physical"
-        own = unplaced(state.grid)  # the receiving code knows nothing of the common frame
+        own = state.space.own  # the receiving code knows nothing of the common frame
         flux = FaceFlux(own, state.flux.faces)
         if magnetic.at == "faces":
-            arrays = components.faces_from_flux(flux, basis, magnetic.densitised)
+            arrays = components.faces_from_flux(flux, basis, magnetic.densitised, state.space.metric)
         else:
             cells = self._cells(flux, basis)
-            scale = components.cell_density(own) if magnetic.densitised else 1.0
+            scale = components.cell_density(own) if magnetic.densitised else 1.0 / state.space.density_factor
             arrays = (cells[0] * scale, cells[1] * scale, cells[2] * scale)
         unit = size_of(magnetic.unit)
         units = magnetic.unit if isinstance(magnetic.unit, str) else f"{unit!r} Heaviside-Lorentz"
@@ -67,15 +69,7 @@ class Store:
             self._write(name, array / unit, where, units)
         self._write_potential(flux)
         for name, quantity in self._target.fluid.items():
-            values = state.fluid[name]
-            if isinstance(quantity.data, str):
-                self._write(quantity.data, values, "cells", "as in the source")
-            else:
-                frame = placement(state.grid)
-                vector = values if frame is None else turned(frame[1].T, values)
-                parts = components.from_cartesian(own, vector, quantity.basis or "physical")
-                for dataset, part in zip(quantity.data, parts, strict=True):
-                    self._write(dataset, part, "cells", "as in the source")
+            self._write_quantity(name, quantity, state)
         for axis, nodes in enumerate(state.grid.nodes, start=1):
             self._output.write(f"{OWN}/nodes/q{axis}", np.array(nodes), {"kind": state.grid.kind})
         self._text("job", self.loaded.text)
@@ -94,6 +88,18 @@ class Store:
             raise JobError(f'{self.loaded.path}: target.magnetic.stencil = "{stencil}": {error}') from None
         self.stencil_cleaning = found.as_dict()
         return cells
+
+    def _write_quantity(self, name: str, quantity: TargetQuantity, state: State) -> None:
+        values = state.fluid[name]
+        if isinstance(quantity.data, str):
+            if quantity.densitised:
+                values = values * state.elements / coordinate_volumes(state.grid)
+            self._write(quantity.data, values, "cells", "as in the source" if self._same_units else "the target's own")
+            return
+        kind = (quantity.kind or "coordinate") if name == VELOCITY else None
+        parts = state.space.to_stored(values, kind, basis_of(quantity, state.space.own))
+        for dataset, part in zip(quantity.data, parts, strict=True):
+            self._write(dataset, part, "cells", "as in the source" if self._same_units else "the target's own")
 
     def _write_potential(self, flux: FaceFlux) -> None:
         wanted = self._target.potential
@@ -114,21 +120,35 @@ class Store:
             write_text(sidecar(path), text)
 
     def read_state(self, state: State) -> State:
-        """What the file now holds, storing errors included: the field and the scalars of the fluid."""
+        """What the file now holds, storing errors included."""
         magnetic = self._target.magnetic
         a, b, c = (self._read(name) for name in magnetic.data)
-        flux = flux_from_stored(unplaced(state.grid), (a, b, c), magnetic, magnetic.at)
-        scalars = {name: q.data for name, q in self._target.fluid.items() if isinstance(q.data, str)}
-        return State(
-            state.path,
-            FaceFlux(state.grid, flux.faces),
-            {name: self._read(dataset) for name, dataset in scalars.items()},
-            state.time,
-        )
+        flux = flux_from_stored(state.space, (a, b, c), magnetic, magnetic.at)
+        fluid: dict[str, Array] = {}
+        for name, quantity in sorted(self._target.fluid.items(), key=lambda item: item[0] != VELOCITY):
+            fluid[name] = self._read_quantity(name, quantity, state, fluid.get(VELOCITY))
+        return State(state.path, FaceFlux(state.grid, flux.faces), state.space, fluid, state.time)
+
+    def read_cells(self) -> Array | None:
+        """The components of the field as the file now holds them; None where it is not at cells."""
+        magnetic = self._target.magnetic
+        if magnetic.at != "cells":
+            return None
+        return size_of(magnetic.unit) * np.stack([self._read(name) for name in magnetic.data])
 
     def write_report(self, text: str) -> None:
         """The report beside the data it speaks of."""
         self._text("report", text)
+
+    def _read_quantity(self, name: str, quantity: TargetQuantity, state: State, velocity: Array | None) -> Array:
+        """A scalar, or Cartesian components in the common frame."""
+        if isinstance(quantity.data, str):
+            values = self._read(quantity.data)
+            if quantity.densitised:
+                values = values * coordinate_volumes(state.grid) / state.space.elements(velocity)
+            return values
+        vector = np.stack([self._read(part) for part in quantity.data])
+        return quantity_from_stored(state.space, vector, quantity, name, basis_of(quantity, state.space.own))
 
     def _read(self, name: str) -> Array:
         return np.ascontiguousarray(self._layout.inside(self._output.read(name)), dtype=np.float64)

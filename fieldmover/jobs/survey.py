@@ -72,27 +72,27 @@ def job_text(path: Path, job: Path, found: Guess) -> str:
     except ValueError:
         file = str(path.resolve())
     straight = found.kind == "cartesian"
-    basis = (
-        "" if straight else f'basis = "{UNKNOWN}"  # physical (orthonormal), coordinate (B^i) or cartesian\n'
-    )
+    basis = "" if straight else f'basis = "{UNKNOWN}"  # physical (orthonormal), coordinate (B^i) or cartesian\n'
     kind = found.kind or UNKNOWN
     axes = _list(found.axes or [UNKNOWN] * 3)
+    why = "".join(f"# {what} ({sure}): {_printable(reason)}\n" for what, sure, reason in found.reasons)
     text = (
-        f"[source]\nfile = {json.dumps(file)}\naxes = {json.dumps(found.order)}\nghosts = {found.ghosts}\n"
-        + (f"time = {json.dumps(found.time)}\n" if found.time else "")
-        + f"\n[source.grid]\nkind = {json.dumps(kind)}\n{'centres' if found.centres else 'nodes'} = {axes}\n"
-        f"\n[source.magnetic]\nat = {json.dumps(found.at)}\ndata = {_list(found.magnetic or [UNKNOWN] * 3)}\n{basis}"
+        f"# Guessed from {_quoted(path.name)}; look through it before you trust it.\n{why}"
+        f"\n[source]\nfile = {_quoted(file)}\naxes = {_quoted(found.order)}\nghosts = {found.ghosts}\n"
+        + (f"time = {_quoted(found.time)}\n" if found.time else "")
+        + f"\n[source.grid]\nkind = {_quoted(kind)}\n{'centres' if found.centres else 'nodes'} = {axes}\n"
+        f"\n[source.magnetic]\nat = {_quoted(found.at)}\ndata = {_list(found.magnetic or [UNKNOWN] * 3)}\n{basis}"
         f'unit = "{UNKNOWN}"  # gaussian, heaviside-lorentz or a number\n'
     )
     target = ""
     if found.density:
-        text += f'\n[source.fluid.density]\ndata = {json.dumps(found.density)}\ncarry = "conserve"\n'
+        text += f'\n[source.fluid.density]\ndata = {_quoted(found.density)}\ncarry = "conserve"\n'
         target = 'density = "/density"\n'
         if found.velocity:
             text += f'\n[source.fluid.velocity]\ndata = {_list(found.velocity)}\n{basis}carry = "by mass"\n'
             target += 'velocity = ["/vx", "/vy", "/vz"]\n'
     return text + (
-        f"\n[target]\nfile = {json.dumps(path.stem + '-moved.h5')}\n"
+        f"\n[target]\nfile = {_quoted(path.stem + '-moved.h5')}\n"
         f'\n[target.grid]\nkind = "cartesian"\nnodes = "{UNKNOWN}"'
         "  # such as [{ from = -1, to = 1, cells = 64 }, ...], one for each axis\n"
         '\n[target.magnetic]\nat = "faces"\ndata = ["/Bx", "/By", "/Bz"]\n'
@@ -103,8 +103,18 @@ def job_text(path: Path, job: Path, found: Guess) -> str:
     )
 
 
+def _quoted(text: str) -> str:
+    """A string of TOML; JSON writes some letters as pairs of escapes, which TOML does not know."""
+    return json.dumps(text, ensure_ascii=False)
+
+
+def _printable(text: str) -> str:
+    """Text that stays within a comment, whatever datasets are called."""
+    return "".join(c if c.isprintable() else "?" for c in text)
+
+
 def _list(names: list[str] | tuple[str, ...]) -> str:
-    return f"[{', '.join(json.dumps(name) for name in names)}]"
+    return f"[{', '.join(_quoted(name) for name in names)}]"
 
 
 def _listing(items: list[Item]) -> str:

@@ -13,11 +13,19 @@ from fieldmover.diagnostics.limits import check_limits, flattened
 from fieldmover.errors import JobError
 from fieldmover.jobs.schema import Within
 
-SMALL = ("divergence", "change", "net", "relative", "linf", "l1", "l2", "net_flux", "north")
-"""Last parts of names of figures that should vanish: their limits are absolute."""
+SMALL = ("divergence", "change", "net", "relative", "linf", "l1", "l2", "net_flux", "north", "error")
+"""Ends of names of figures that should vanish: their limits are absolute,"""
+LOST = ("energy_lost.", "gas.change.")
+"""as are those of figures with these beginnings."""
+SIGNED = re.compile(r"gas\.(before|stored)\..*momentum|surfaces\..*flux$|helicity\..*\.(value|free_energy)$")
+"""Sums with both signs, which may vanish: no limit is made from them but from what they changed by."""
 
 ROUND_OFF = 1e-14
 """Of relative figures; a limit below it would fail on another machine."""
+
+
+GROUPS = ("stencil", "surfaces", "helicity", "gas", "extremes", "agreement")
+"""Of a report; in those of earlier versions they are missing."""
 
 
 def figures_of(report: Mapping[str, Any]) -> dict[str, float | None]:
@@ -29,6 +37,7 @@ def figures_of(report: Mapping[str, Any]) -> dict[str, float | None]:
             "fluid": report["fluid"],
             "regions": report["regions"],
             "coverage": report["coverage"] or {},
+            **{group: report.get(group) or {} for group in GROUPS},
         }
     )
 
@@ -125,10 +134,10 @@ def limits_table(report: Mapping[str, Any], names: list[str], margin: float, pat
     lines = [f"# made from {path} with a margin of {margin:g}", "[limits]"]
     for name in names:
         value = found.get(name)
-        if value is None:
+        if value is None or SIGNED.match(name):
             continue
         key = name if re.fullmatch(r"[A-Za-z0-9_.-]+", name) else json.dumps(name)
-        if name.startswith("energy_lost.") or name.rsplit(".", 1)[-1].endswith(SMALL):
+        if name.startswith(LOST) or name.rsplit(".", 1)[-1].endswith(SMALL):
             lines.append(f"{key} = {_rounded_up(max(abs(value) * (1 + margin), ROUND_OFF))}")
         else:
             lines.append(f"{key} = {{ within = {margin!r}, of = {json.dumps(path)} }}")

@@ -83,7 +83,7 @@ def project_cells(
     (True, True)
     """
     started = time.perf_counter()
-    divergence, inside = _Divergence(grid, stencil), region_masks(grid, regions)
+    divergence, inside = CellDivergence(grid, stencil), region_masks(grid, regions)
     before = np.asarray(b, dtype=np.float64)
     if before.shape != (3, *grid.shape):
         raise FieldError(f"b: shape {before.shape}, expected {(3, *grid.shape)}")
@@ -177,7 +177,7 @@ def _axis(nodes: Array, seam: bool, reach: int) -> _Axis:
     return _Axis(n, step, seam, reach, slopes, weights)
 
 
-class _Divergence:
+class CellDivergence:
     """A stencil D on a grid."""
 
     def __init__(self, grid: Grid, stencil: Stencil) -> None:
@@ -271,7 +271,7 @@ def _spread(x: Array, transform: Transform, axis: int) -> Array:
     return out
 
 
-def _balance(divergence: _Divergence, b: Array) -> tuple[Array, Norms, float]:
+def _balance(divergence: CellDivergence, b: Array) -> tuple[Array, Norms, float]:
     """D b, its norms relative to the sizes of its terms, the largest of these."""
     found, size = divergence.of(b), divergence.sizes(b)
     largest = float(size.max())

@@ -3,15 +3,30 @@
 Every key has a default where one is honest. What is not listed here is a mistake, told with the nearest known key.
 """
 
-from fieldmover.jobs.schema.fields import MASS, Magnetic
+from fieldmover.jobs.schema.fields import Magnetic
+from fieldmover.jobs.schema.gas import (
+    DIMENSIONS,
+    MASS,
+    POSITIONS,
+    PRESSURE,
+    VELOCITY,
+    SourceQuantity,
+    TargetQuantity,
+    formula,
+)
 from fieldmover.jobs.schema.grids import AnyGrid, Map, Placement, SourceGrid, Spaced, Symmetry, TargetGrid
 from fieldmover.jobs.schema.job import Job, Source
 from fieldmover.jobs.schema.measures import Region, Within
+from fieldmover.jobs.schema.mistakes import formula_names, mistakes, plain
 from fieldmover.jobs.schema.tables import TAGS
 
 __all__ = [
+    "DIMENSIONS",
     "MASS",
+    "POSITIONS",
+    "PRESSURE",
     "TAGS",
+    "VELOCITY",
     "AnyGrid",
     "Job",
     "Magnetic",
@@ -20,8 +35,14 @@ __all__ = [
     "Region",
     "Source",
     "SourceGrid",
+    "SourceQuantity",
     "Spaced",
     "Symmetry",
     "TargetGrid",
+    "TargetQuantity",
     "Within",
+    "formula",
+    "formula_names",
+    "mistakes",
+    "plain",
 ]

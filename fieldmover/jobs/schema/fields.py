@@ -1,19 +1,12 @@
-"""What a job says of the magnetic field and the fluid, on both sides."""
+"""What a job says of the magnetic field and its potential, on both sides."""
 
 from __future__ import annotations
 
-from typing import Any, Literal
+from typing import Literal
 
 from pydantic import Field, model_validator
 
-from fieldmover.jobs.schema.tables import Basis, Components, Data, Number, Table, Unit
-
-MASS = "density"
-"""The quantity that weighs those carried by mass."""
-
-
-def data_alone(value: Any) -> Any:
-    return {"data": value} if isinstance(value, str | list) else value
+from fieldmover.jobs.schema.tables import Basis, Components, Table, Unit
 
 
 class Magnetic(Table):
@@ -58,21 +51,3 @@ class TargetPotential(Table):
         if self.at == "edges" and self.basis == "cartesian":
             raise ValueError('basis = "cartesian" goes with at = "cells"; edges follow the grid')
         return self
-
-
-class SourceQuantity(Table):
-    """A fluid quantity: a scalar, or three components of a vector."""
-
-    data: Data = Field(description="a dataset, or three for a vector")
-    carry: Literal["conserve", "by mass"] = Field(
-        description='"conserve" (a density) or "by mass" (a value per unit mass)'
-    )
-    basis: Basis | None = None
-
-
-class TargetQuantity(Table):
-    """Where a fluid quantity goes, and its value where the source does not reach."""
-
-    data: Data = Field(description="a dataset, or three for a vector")
-    basis: Basis | None = None
-    outside: Number = 0.0

@@ -8,7 +8,7 @@ from pydantic import AfterValidator, Discriminator, Field, StringConstraints, Ta
 
 from fieldmover.jobs.schema.tables import Dataset, Number, Sought, Table, Text, Three, increasing
 
-Kind = Literal["cartesian", "cylindrical", "spherical", "warped", "tabulated"]
+Kind = Literal["cartesian", "cylindrical", "spherical", "kerr-schild", "warped", "tabulated"]
 Pole = Literal["none", "low", "high", "both"]
 
 
@@ -58,6 +58,7 @@ class Map(Table):
 
     python: Annotated[str, StringConstraints(pattern=r"^.+\.py:[A-Za-z_]\w*$", max_length=1000)] | None = None
     parameters: dict[str, Sought] = {}
+    rates: dict[str, Sought] = {}
     crowded: Crowded | None = None
 
     @model_validator(mode="after")
@@ -66,6 +67,10 @@ class Map(Table):
             raise ValueError('give either python = "file.py:function" or crowded = { separation = ... }')
         if self.crowded is not None and self.parameters:
             raise ValueError("parameters go with python; those of crowded stand in its own table")
+        own = Crowded.model_fields if self.crowded is not None else self.parameters
+        for name in self.rates:
+            if name not in own:
+                raise ValueError(f"rates: {name!r} is no parameter of the map; it has {', '.join(own) or 'none'}")
         return self
 
 
@@ -105,6 +110,7 @@ _KEYS = {
     "cartesian": ("nodes", "centres", "periodic"),
     "cylindrical": ("nodes", "centres"),
     "spherical": ("nodes", "centres"),
+    "kerr-schild": ("nodes", "centres"),
     "warped": ("nodes", "centres", "map", "periodic", "poles"),
     "tabulated": ("positions", "at", "periodic", "poles"),
 }
@@ -113,7 +119,7 @@ _KEYS = {
 class AnyGrid(Table):
     """What both grids say."""
 
-    kind: Kind = Field(description='"cartesian", "cylindrical", "spherical", "warped" or "tabulated"')
+    kind: Kind = Field(description='"cartesian", "cylindrical", "spherical", "kerr-schild", "warped" or "tabulated"')
     nodes: Annotated[list[Nodes], Three] | None = None
     periodic: Annotated[list[bool], Three] | None = None
     poles: Annotated[list[Pole], Three] | None = None
@@ -157,7 +163,7 @@ class SourceGrid(AnyGrid):
     def _one(self) -> SourceGrid:
         if self.kind != "tabulated" and (self.nodes is None) == (self.centres is None):
             raise ValueError("give either nodes or centres: three datasets, lists or rules, one for each axis")
-        if self.symmetry is not None and self.kind in ("warped", "tabulated"):
+        if self.symmetry is not None and self.kind not in ("cartesian", "cylindrical", "spherical"):
             raise ValueError(f"symmetry is for cartesian, cylindrical and spherical grids, not for a {self.kind} one")
         return self
 
