@@ -16,8 +16,8 @@ from fieldmover.conventions.components import (
     to_cartesian,
 )
 from fieldmover.conventions.units import size_of
-from fieldmover.conventions.vector_potential import potential_from_edges
-from fieldmover.errors import DataError, FieldError
+from fieldmover.conventions.vector_potential import edges_from_potential, potential_from_edges
+from fieldmover.errors import DataError
 
 GRIDS = {
     "cartesian": fm.cartesian_grid([0, 1, 3], [-1, 0.5, 1], [2, 2.5]),
@@ -126,27 +126,34 @@ def test_a_seam_that_does_not_close():
     grid = GRIDS["cylindrical"]
     values = [np.ones(grid.face_shape(axis)) for axis in range(3)]
     values[1][1, -1, 0] = 1.001
-    with pytest.raises(
-        DataError, match=r"component 2: first and last value along the seam of axis 2"
-    ):
+    with pytest.raises(DataError, match=r"component 2: first and last value along the seam of axis 2"):
         flux_from_faces(grid, tuple(values), "physical")
     values[1][1, -1, 0] = 1.000001
     flux = flux_from_faces(grid, tuple(values), "physical")
     assert np.array_equal(flux.f2[:, 0], flux.f2[:, -1])
 
 
-def test_a_warped_grid_has_no_closed_form():
-    grid = fm.warped_grid([0, 1], [0, 1], [0, 1], lambda a, b, c: (a + 0.1 * b, b, c))
-    ones = tuple(np.ones(grid.face_shape(axis)) for axis in range(3))
-    for basis in ("physical", "coordinate"):
-        with pytest.raises(FieldError, match="no closed form"):
-            flux_from_faces(grid, ones, basis)
+@pytest.mark.parametrize("basis", ["physical", "coordinate"])
+def test_faces_and_edges_of_a_warped_grid_by_quadrature(basis):
+    """A spherical grid given as a map, beside the closed forms of the same grid."""
+    q = np.linspace(1, 2, 5), np.linspace(0, np.pi, 9), np.linspace(0, 2 * np.pi, 13)
+    plain = fm.spherical_grid(*q)
+    warped = fm.warped_grid(*q, plain.map.to_cartesian, (False, False, True), (None, "both", None))
+    flux = fm.flux_from_function(plain, lambda x, y, z: (y, z, 1 + x))
+    pot = fm.potential_from_function(plain, lambda x, y, z: (y, z, 1 + x))
+    same = fm.FaceFlux(warped, flux.faces)
+    for a, b in zip(faces_from_flux(flux, basis), faces_from_flux(same, basis), strict=True):
+        assert np.abs(a - b).max() < 1e-6 * np.abs(a).max()
+    back = flux_from_faces(warped, faces_from_flux(same, basis), basis)
+    for a, b in zip(back.faces, flux.faces, strict=True):
+        assert np.abs(a - b).max() < 1e-14
+    same_pot = fm.EdgePotential(warped, pot.edges)
+    for a, b in zip(edges_from_potential(pot, basis), edges_from_potential(same_pot, basis), strict=True):
+        assert np.abs(a - b).max() < 1e-6 * np.abs(a).max()
 
 
 def test_units():
     """B in Gaussian units is sqrt(4 pi) times the same field in Heaviside-Lorentz units."""
-    assert size_of("heaviside-lorentz") / size_of("gaussian") == pytest.approx(
-        3.5449077018110320546, rel=1e-15
-    )
+    assert size_of("heaviside-lorentz") / size_of("gaussian") == pytest.approx(3.5449077018110320546, rel=1e-15)
     with pytest.raises(ValueError, match="expected a number or one of"):
         size_of("tesla")

@@ -13,7 +13,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.conventions.metrics import Metric, centre_jacobian, face_elements
+from fieldmover.conventions.metrics import FlatMetric, Metric, centre_jacobian, face_elements
 from fieldmover.errors import DataError, FieldError
 from fieldmover.forms.fields import FaceFlux, Three, close_faces
 from fieldmover.grids.axes import centres_of
@@ -38,7 +38,7 @@ def flux_from_faces(
     Parameters
     ----------
     grid : Grid
-        Cartesian, cylindrical or spherical; any with a metric, or with densitised components.
+        Of any kind.
     arrays : three arrays
         The component normal to each face, shapes (n1 + 1, n2, n3), (n1, n2 + 1, n3), (n1, n2, n3 + 1), unit
         B.
@@ -59,7 +59,7 @@ def flux_from_faces(
     DataError
         If the two copies of a seam differ, or the metric does not fit the grid.
     FieldError
-        If the grid is of another kind, or orthonormal components are given with a metric.
+        If orthonormal components are given with a metric, on a grid that is not Cartesian.
 
     Examples
     --------
@@ -153,27 +153,27 @@ def _face_measures(grid: Grid, basis: Basis, densitised: bool, metric: Metric | 
         raise FieldError(
             f"{basis} components on faces of a {grid.kind} grid in curved space: expected coordinate components"
         )
-    if metric is not None and not densitised:
-        return face_elements(metric, grid)
+    if grid.kind not in _CLOSED and basis != "coordinate":
+        return grid.face_areas()
+    if (metric is not None or grid.kind not in _CLOSED) and not densitised:
+        return face_elements(metric or FlatMetric(), grid)
     a, b, c = (outer(factors) for factors in _faces(grid, basis, densitised))
     return a, b, c
 
 
 def _faces(grid: Grid, basis: Basis, densitised: bool) -> tuple[Factors, Factors, Factors]:
     """What a stored component is multiplied by, [normal axis][axis]."""
-    if basis != "coordinate":
-        factors = area_factors(grid)
-        if factors is None:
-            raise _no_closed_form(grid)
-        return factors[0], factors[1], factors[2]
     if densitised:
         q1, q2, q3 = grid.nodes
         points: Factors = (np.ones(q1.size), np.ones(q2.size), np.ones(q3.size))
         integrals: Factors | None = (np.diff(q1), np.diff(q2), np.diff(q3))
-    else:
+    elif basis == "coordinate":
         points, integrals = _density(grid, centres=False), volume_factors(grid)
-    if integrals is None:
-        raise _no_closed_form(grid)
+    else:
+        factors = area_factors(grid)
+        assert factors is not None  # of grids with closed forms
+        return factors[0], factors[1], factors[2]
+    assert integrals is not None
     return _mixed(points, integrals, 0), _mixed(points, integrals, 1), _mixed(points, integrals, 2)
 
 
@@ -190,9 +190,7 @@ def _density(grid: Grid, centres: bool) -> Factors:
         return np.ones_like(q1), one2, one3
     if grid.kind == "cylindrical":
         return q1, one2, one3
-    if grid.kind == "spherical":
-        return q1**2, np.sin(q2) if centres else sines(grid), one3
-    raise _no_closed_form(grid)
+    return q1**2, np.sin(q2) if centres else sines(grid), one3
 
 
 def check_seams(grid: Grid, arrays: list[Array], what: str) -> None:
@@ -207,7 +205,3 @@ def check_seams(grid: Grid, arrays: list[Array], what: str) -> None:
                     f"magnetic field on {what}, component {component + 1}: first and last value along "
                     f"the seam of axis {axis + 1} differ by up to {gap:.3g} in flux; expected copies"
                 )
-
-
-def _no_closed_form(grid: Grid) -> FieldError:
-    return FieldError(f"components on faces and edges of a {grid.kind} grid have no closed form")
