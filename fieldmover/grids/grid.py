@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import groupby
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -16,9 +17,10 @@ from fieldmover.grids.folds import least_corner
 from fieldmover.grids.maps import CartesianMap, CylindricalMap, Map, SphericalMap, Triple, WarpedMap
 
 Array = NDArray[np.float64]
+Points = list[tuple[slice, list[Array], Array]]
 
 _GAUSS3 = ((-(0.6**0.5), 5 / 9), (0.0, 8 / 9), (0.6**0.5, 5 / 9))
-_SLAB = 1 << 18  # cells whose positions are in memory at a time
+_SLAB = 1 << 14  # cells whose positions are in memory at a time
 
 
 @dataclass(frozen=True, eq=False)
@@ -137,10 +139,14 @@ class Grid:
         for axis in range(3):
             area = np.zeros(self.face_shape(axis))
             others = [d for d in range(3) if d != axis]
-            for rows, q, weight in quadrature(self, others, [(g, h) for g in _GAUSS3 for h in _GAUSS3]):
-                tangents = self.map.jacobian(*_open(*q))
-                normal = np.cross(tangents[:, others[0]], tangents[:, others[1]], axis=0)
-                area[rows] += np.sqrt((normal**2).sum(axis=0)) * weight
+
+            def add(points: Points, others: list[int] = others, area: Array = area) -> None:
+                for rows, q, weight in points:
+                    tangents = self.map.jacobian(*_open(*q))
+                    normal = np.cross(tangents[:, others[0]], tangents[:, others[1]], axis=0)
+                    area[rows] += np.sqrt((normal**2).sum(axis=0)) * weight
+
+            compute.for_each(add, _by_slabs(quadrature(self, others, [(g, h) for g in _GAUSS3 for h in _GAUSS3])))
             areas.append(area)
         for axis in range(3):
             for end in self.pole_ends(axis):
@@ -164,9 +170,13 @@ class Grid:
             return outer(factors)
         volume = np.zeros(self.shape)
         points: list[tuple[tuple[float, float], ...]] = [(f, g, h) for f in _GAUSS3 for g in _GAUSS3 for h in _GAUSS3]
-        for rows, q, weight in quadrature(self, [0, 1, 2], points):
-            j = self.map.jacobian(*_open(*q))
-            volume[rows] += np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0)) * weight
+
+        def add(points: Points) -> None:
+            for rows, q, weight in points:
+                j = self.map.jacobian(*_open(*q))
+                volume[rows] += np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0)) * weight
+
+        compute.for_each(add, _by_slabs(quadrature(self, [0, 1, 2], points)))
         return volume
 
 
@@ -183,6 +193,11 @@ def outer(factors: tuple[Array, Array, Array]) -> Array:
 
 def _open(q1: Array, q2: Array, q3: Array) -> Triple:
     return q1[:, None, None], q2[None, :, None], q3[None, None, :]
+
+
+def _by_slabs(points: Iterator[tuple[slice, list[Array], Array]]) -> list[Points]:
+    """The points of `quadrature`, those of each slab together."""
+    return [list(group) for _, group in groupby(points, key=lambda point: point[0].start)]
 
 
 def quadrature(

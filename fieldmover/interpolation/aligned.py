@@ -10,6 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from fieldmover import compute
 from fieldmover.forms.fields import EdgePotential, Three
 from fieldmover.grids.grid import Grid
 from fieldmover.grids.maps import WarpedMap
@@ -25,31 +26,73 @@ _GAUSS = np.polynomial.legendre.leggauss(3)  # exact on the pieces of all orders
 def same_coordinates(source: Grid, target: Grid) -> bool:
     """Whether both grids have the same map."""
     if isinstance(source.map, WarpedMap) and isinstance(target.map, WarpedMap):
-        return source.map.function is target.map.function
+        return source.map.function == target.map.function
     return source.map == target.map
 
 
-def move_aligned(pot: EdgePotential, target: Grid, order: int) -> tuple[Three, tuple[Mask, Mask, Mask]]:
-    """Circulations along the target's edges and which of them lie in the source; arguments as `move_potential`."""
-    source, splines = pot.grid, grid_splines(pot.grid, order)
-    nodes = [_into_range(q, source, axis) for axis, q in enumerate(target.nodes)]
-    at_nodes = [_values_at(spline, q) for spline, q in zip(splines, nodes, strict=True)]
-    over_edges = [
-        _integrals_over(spline, q, source, axis) for axis, (spline, q) in enumerate(zip(splines, nodes, strict=True))
-    ]
-    reached = [_reached(q, source, axis) for axis, q in enumerate(nodes)]
-    edges, known = [], []
-    for d, a in enumerate(pot.edges):
-        values = fit_form(source, splines, a, (d,))
-        mask = np.ones((1, 1, 1), dtype=bool)
-        for axis in range(3):
-            matrix = over_edges[axis] if axis == d else at_nodes[axis]
-            values = np.moveaxis(np.tensordot(matrix, values, axes=(1, axis)), 0, axis)
-            here = reached[axis][1:] & reached[axis][:-1] if axis == d else reached[axis]
-            mask = mask & here.reshape([-1 if e == axis else 1 for e in range(3)])
-        edges.append(np.where(mask, values, 0.0))
-        known.append(np.broadcast_to(mask, values.shape).copy())
-    return (edges[0], edges[1], edges[2]), (known[0], known[1], known[2])
+def joins_cells(source: Grid, target: Grid) -> bool:
+    """Whether cells of one grid are cells of the other joined: same map, all nodes of one are nodes of the other."""
+    return same_coordinates(source, target) and all(
+        np.isin(a, b).all() or np.isin(b, a).all() for a, b in zip(source.nodes, target.nodes, strict=True)
+    )
+
+
+class Aligned:
+    """How a source's potentials are moved to a target in the same coordinates.
+
+    Parameters
+    ----------
+    source, target : Grid
+    """
+
+    def __init__(self, source: Grid, target: Grid) -> None:
+        self.source, self.target = source, target
+        self.nodes = [_into_range(q, source, axis) for axis, q in enumerate(target.nodes)]
+        self.reached = [_reached(q, source, axis) for axis, q in enumerate(self.nodes)]
+
+    @property
+    def nbytes(self) -> int:
+        return sum(a.nbytes for a in (*self.nodes, *self.reached))
+
+    def start(self, pot: EdgePotential, order: int) -> AlignedPart:
+        """Fit the spline of a potential; circulations along the edges of any slab can then be asked for."""
+        return AlignedPart(self, pot, order)
+
+
+class AlignedPart:
+    """One potential on its way."""
+
+    def __init__(self, way: Aligned, pot: EdgePotential, order: int) -> None:
+        self._way, source = way, way.source
+        splines = grid_splines(source, order)
+        self._at_nodes = [_values_at(spline, q) for spline, q in zip(splines, way.nodes, strict=True)]
+        self._over_edges = [
+            _integrals_over(spline, q, source, axis)
+            for axis, (spline, q) in enumerate(zip(splines, way.nodes, strict=True))
+        ]
+        self._coefficients = [fit_form(source, splines, a, (d,)) for d, a in enumerate(pot.edges)]
+
+    def edges(self, cells: slice) -> tuple[Three, tuple[Mask, Mask, Mask]]:
+        """Circulations along the edges of a slab of cells along axis 1, and which of them lie in the source."""
+        edges, known = [], []
+        for d, coefficients in enumerate(self._coefficients):
+            matrices = [self._over_edges[axis] if axis == d else self._at_nodes[axis] for axis in range(3)]
+            here = [r[1:] & r[:-1] if axis == d else r for axis, r in enumerate(self._way.reached)]
+            rows = slice(cells.start, cells.stop + (d > 0))
+            values = np.empty((rows.stop - rows.start, matrices[1].shape[0], matrices[2].shape[0]))
+
+            def work(row: int, matrices: list[Array] = matrices, c: Array = coefficients, out: Array = values) -> None:
+                # one plane at a time: sums have the same bits whatever the slab
+                taken = np.flatnonzero(matrices[0][row])
+                band = slice(taken[0], taken[-1] + 1)
+                plane = np.tensordot(matrices[0][row, band], c[band], axes=1)
+                out[row - cells.start] = matrices[1] @ plane @ matrices[2].T
+
+            compute.for_each(work, range(rows.start, rows.stop))
+            mask = here[0][rows, None, None] & here[1][:, None] & here[2]
+            edges.append(np.where(mask, values, 0.0))
+            known.append(mask)
+        return (edges[0], edges[1], edges[2]), (known[0], known[1], known[2])
 
 
 def _into_range(q: Array, source: Grid, axis: int) -> Array:

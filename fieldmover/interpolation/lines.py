@@ -10,6 +10,9 @@ target's nodes, and the edge is left to points of its own.
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -60,7 +63,46 @@ def edge_weights_of(nodes: Array, periodic: bool, size: int = _STENCIL) -> tuple
     return places.astype(np.int64), step[:, None] * np.linalg.solve(vandermonde, moments[:, :, None])[:, :, 0]
 
 
-def integrate_lines(rates: Array, axis: int, nodes: Array, periodic: bool, out: Array) -> None:
+@dataclass(frozen=True, eq=False)
+class LineRule:
+    """What the integrals over the edges of one axis take of the nodes.
+
+    Attributes
+    ----------
+    places : int ndarray, shape (n, 6)
+        Nodes of each edge's stencil; none on axes of fewer than five cells.
+    weights : ndarray, shape (n, 6)
+    doubts : ndarray, shape (n, 6)
+        Their difference from the weights of the inner four nodes.
+    steps : ndarray, shape (n,)
+        Lengths of the edges.
+    """
+
+    places: NDArray[np.int64]
+    weights: Array
+    doubts: Array
+    steps: Array
+
+    @classmethod
+    def of(cls, nodes: Array, periodic: bool) -> LineRule:
+        """The rule of an axis."""
+        if nodes.size < _STENCIL:
+            none = np.empty((nodes.size - 1, 0))
+            return cls(none.astype(np.int64), none, none, np.diff(nodes))
+        places, weights = edge_weights_of(nodes, periodic)
+        inner_places, inner_weights = edge_weights_of(nodes, periodic, _INNER)
+        doubts = weights.copy()
+        for m in range(_INNER):
+            row, column = np.nonzero(places == inner_places[:, m : m + 1])
+            doubts[row, column] -= inner_weights[row, m]
+        return cls(places, weights, doubts, np.diff(nodes))
+
+    def part(self, edges: slice, position: Callable[[NDArray[np.int64]], NDArray[np.int64]]) -> LineRule:
+        """The rule of some edges, for nodes that stand elsewhere."""
+        return LineRule(position(self.places[edges]), self.weights[edges], self.doubts[edges], self.steps[edges])
+
+
+def integrate_lines(rates: Array, axis: int, rule: LineRule, floor: float, out: Array) -> None:
     """Integrals over the edges along one axis of rates given at the nodes.
 
     Parameters
@@ -68,23 +110,18 @@ def integrate_lines(rates: Array, axis: int, nodes: Array, periodic: bool, out: 
     rates : ndarray, shape (m1, m2, m3)
         Per unit of the coordinate along `axis`; NaN where not known.
     axis : int
-    nodes : ndarray
+    rule : LineRule
         Of that axis.
-    periodic : bool
+    floor : float
+        Integrals below it are round-off and need not be resolved.
     out : ndarray
-        As `rates` with one fewer along `axis`. NaN where the stencil holds one, where the rate is not resolved, and
-        everywhere on axes of fewer than five cells.
+        As long as the rule along `axis`, otherwise as `rates`. NaN where the stencil holds one, where the rate is not
+        resolved, and everywhere on axes of fewer than five cells.
     """
-    if nodes.size < _STENCIL:
+    if rule.places.shape[1] == 0:
         out[...] = np.nan
         return
-    places, weights = edge_weights_of(nodes, periodic)
-    inner_places, inner_weights = edge_weights_of(nodes, periodic, _INNER)
-    doubts = weights.copy()
-    for m in range(_INNER):
-        row, column = np.nonzero(places == inner_places[:, m : m + 1])
-        doubts[row, column] -= inner_weights[row, m]
-    tables = (places, weights, doubts, np.diff(nodes))
+    tables = (rule.places, rule.weights, rule.doubts, rule.steps, floor)
     if axis == 0:  # planes of edges are independent
         compute.for_each(
             lambda part: _across_planes(rates, *tables, part.start, part.stop, out), compute.slabs(out.shape[0], _ROWS)
@@ -95,7 +132,7 @@ def integrate_lines(rates: Array, axis: int, nodes: Array, periodic: bool, out: 
 
 
 @compute.kernel
-def _integral(v0, v1, v2, v3, v4, v5, weights, doubts, step):
+def _integral(v0, v1, v2, v3, v4, v5, weights, doubts, step, floor):
     """Weighted sum, or NaN where the sum of doubts is too large beside the range of the values."""
     total = weights[0] * v0 + weights[1] * v1 + weights[2] * v2 + weights[3] * v3 + weights[4] * v4 + weights[5] * v5
     doubt = doubts[0] * v0 + doubts[1] * v1 + doubts[2] * v2 + doubts[3] * v3 + doubts[4] * v4 + doubts[5] * v5
@@ -103,7 +140,7 @@ def _integral(v0, v1, v2, v3, v4, v5, weights, doubts, step):
         _less(_less(_less(v0, v1), _less(v2, v3)), _less(v4, v5)),
         _more(_more(_more(v0, v1), _more(v2, v3)), _more(v4, v5)),
     )
-    allowed = step * (_RESOLVED * (high - low) + 1e-13 * _more(high, -low))
+    allowed = step * _RESOLVED * (high - low) + floor
     return total if abs(doubt) <= allowed else np.nan
 
 
@@ -118,13 +155,13 @@ def _more(a, b):
 
 
 @compute.kernel
-def _row(r0, r1, r2, r3, r4, r5, weights, doubts, step, out):
+def _row(r0, r1, r2, r3, r4, r5, weights, doubts, step, floor, out):
     for k in range(out.size):
-        out[k] = _integral(r0[k], r1[k], r2[k], r3[k], r4[k], r5[k], weights, doubts, step)
+        out[k] = _integral(r0[k], r1[k], r2[k], r3[k], r4[k], r5[k], weights, doubts, step, floor)
 
 
 @compute.kernel
-def _across_planes(rates, places, weights, doubts, steps, start, stop, out):
+def _across_planes(rates, places, weights, doubts, steps, floor, start, stop, out):
     for i in range(start, stop):
         p, w, d = places[i], weights[i], doubts[i]
         for j in range(out.shape[1]):
@@ -138,26 +175,27 @@ def _across_planes(rates, places, weights, doubts, steps, start, stop, out):
                 w,
                 d,
                 steps[i],
+                floor,
                 out[i, j],
             )
 
 
 @compute.kernel
-def _across_rows(rates, places, weights, doubts, steps, out):
+def _across_rows(rates, places, weights, doubts, steps, floor, out):
     for i in range(out.shape[0]):
         r = rates[i]
         for j in range(out.shape[1]):
             p, w, d = places[j], weights[j], doubts[j]
-            _row(r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], w, d, steps[j], out[i, j])
+            _row(r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], w, d, steps[j], floor, out[i, j])
 
 
 @compute.kernel
-def _along_rows(rates, places, weights, doubts, steps, out):
+def _along_rows(rates, places, weights, doubts, steps, floor, out):
     for i in range(out.shape[0]):
         for j in range(out.shape[1]):
             r = rates[i, j]
             for k in range(out.shape[2]):
                 p = places[k]
                 out[i, j, k] = _integral(
-                    r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], weights[k], doubts[k], steps[k]
+                    r[p[0]], r[p[1]], r[p[2]], r[p[3]], r[p[4]], r[p[5]], weights[k], doubts[k], steps[k], floor
                 )

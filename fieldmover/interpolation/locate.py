@@ -6,6 +6,8 @@ its node positions, inverted by Newton's method (`newton`). Points are first bro
 
 from __future__ import annotations
 
+from copy import copy
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -40,18 +42,18 @@ class Locator:
     """
 
     def __init__(self, grid: Grid) -> None:
-        self.grid = grid
+        self.grid = self._part = grid
         self._middle = tuple(0.5 * (q[0] + q[-1]) for q in grid.nodes)
         first = grid.nodes[0][1] - (grid.nodes[0][0] if grid.kind == "cylindrical" else 0.0)
         self._near_axis = _ON_POLE * abs(float(first))
         self._placement = placement(grid)
         self._newton = None if grid.kind in _KINDS else NewtonInverse(unplaced(grid))
 
-    def coordinates(self, x: Array) -> Array:
+    def coordinates(self, x: Array, start: Array | None = None) -> Array:
         """Grid coordinates of points, as `pull_back` gives them; x of shape (3, N)."""
-        return self.pull_back(x, np.empty((3, 0, x.shape[1])))[0]
+        return self.pull_back(x, np.empty((3, 0, x.shape[1])), start)[0]
 
-    def pull_back(self, x: Array, tangents: Array) -> tuple[Array, Array]:
+    def pull_back(self, x: Array, tangents: Array, start: Array | None = None) -> tuple[Array, Array]:
         """Grid coordinates of points, and tangents in them.
 
         Parameters
@@ -60,6 +62,8 @@ class Locator:
             Cartesian positions.
         tangents : ndarray, shape (3, T, N)
             Cartesian components of T vectors at each.
+        start : ndarray, shape (3, N), optional
+            Coordinates near those of the points, for a grid without closed form.
 
         Returns
         -------
@@ -78,10 +82,26 @@ class Locator:
             x, tangents = turned(turn.T, x - origin[:, None]), turned(turn.T, tangents)
         x, tangents = np.ascontiguousarray(x), np.ascontiguousarray(tangents)
         if self._newton is not None:
-            return self._newton.pull_back(x, tangents)
-        q, dq = np.empty_like(x), np.empty_like(tangents)
-        _closed_form(_KINDS[self.grid.kind], self._middle, self._near_axis, x, tangents, q, dq)
+            q, dq = self._newton.pull_back(x, tangents, start)
+        else:
+            q, dq = np.empty_like(x), np.empty_like(tangents)
+            _closed_form(_KINDS[self.grid.kind], self._middle, self._near_axis, x, tangents, q, dq)
+        if self._part is not self.grid:
+            self.close(q)
         return q, dq
+
+    def onto(self, part: Grid) -> Locator:
+        """The same for a part of the grid: coordinates round a seam begin where the part does."""
+        other = copy(self)
+        other._part = part
+        return other
+
+    def close(self, q: Array) -> None:
+        """Bring coordinates (3, ...) round seams into the range of the nodes, in place."""
+        for d, seam in enumerate(self.grid.periodic):
+            if seam:
+                turn = np.ptp(self.grid.nodes[d])
+                q[d] -= turn * np.floor((q[d] - self._part.nodes[d][0]) / turn)
 
     def cells(self, x: Array) -> NDArray[np.int64]:
         """Flat index of the cell that holds each point, -1 outside the grid; x of shape (3, N)."""

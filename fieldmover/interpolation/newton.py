@@ -32,6 +32,7 @@ _BLOCKS = 16  # along each axis, each with a place to start from
 _CANDIDATES = 6  # places tried for a point
 _STEPS = 40
 _LAST_STEP, _LONGEST_STEP = 2e-6, 16.0  # in cells
+_ENOUGH = 1e-4  # last step from a place that is given: the error, its square, is far below that of polynomials
 _TRAIL = 6  # points that are extrapolated from
 _ASTRAY = 0.3  # of a cell: largest difference between that and the chord step
 _POLAR = 4.0  # within so many cells of a pole steps are taken in the plane of the ring
@@ -63,12 +64,15 @@ class NewtonInverse:
             ]
         )
 
-    def pull_back(self, x: Array, tangents: Array) -> tuple[Array, Array]:
+    def pull_back(self, x: Array, tangents: Array, start: Array | None = None) -> tuple[Array, Array]:
         """Coordinates and components of tangents, as `Locator.pull_back`; NaN outside the grid."""
         q, dq = np.empty_like(x), np.empty_like(tangents)
         state = np.zeros(x.shape[1], dtype=np.int8)
-        _, first = self._starts.tree.query(x[:, :1].T)
-        self._run(x, tangents, self._starts.q[:, first], True, q, dq, state)
+        if start is None:
+            _, first = self._starts.tree.query(x[:, :1].T)
+            self._run(x, tangents, self._starts.q[:, first], True, q, dq, state)
+        else:
+            self._run(x, tangents, start, False, q, dq, state, _ENOUGH)
         open_points = np.flatnonzero(state != _FOUND)
         if open_points.size:
             self._search(x, tangents, open_points, q, dq, state)
@@ -101,21 +105,20 @@ class NewtonInverse:
                 "expected a map that is smooth on the scale of a cell and one-to-one"
             )
 
-    def _run(self, x: Array, tangents: Array, start: Array, chained: bool, q: Array, dq: Array, state: State) -> None:
-        _newton(
-            x,
-            tangents,
-            np.ascontiguousarray(start),
-            chained,
-            *self.spline.table,
-            self.spline.coefficients.reshape(-1),
-            self.spline.strides,
-            self._frame,
-            _ROUND_OFF * self._starts.size,
-            q,
-            dq,
-            state,
-        )
+    def _run(
+        self,
+        x: Array,
+        tangents: Array,
+        start: Array,
+        chained: bool,
+        q: Array,
+        dq: Array,
+        state: State,
+        last_step: float = _LAST_STEP,
+    ) -> None:
+        spline = (*self.spline.table, self.spline.coefficients.reshape(-1), self.spline.strides)
+        stop = (_ROUND_OFF * self._starts.size, last_step)
+        _newton(x, tangents, np.ascontiguousarray(start), chained, spline, self._frame, stop, q, dq, state)
 
 
 def _spline_of(grid: Grid) -> PositionSpline:
@@ -161,15 +164,15 @@ class _Starts:
         return cls(q, 1.25 * reach.ravel(), cKDTree(middle.reshape(3, -1).T), float(np.abs(x).max()))
 
 
-# In the kernels `frame` holds for each axis its ends (0, 1), the widths of its outermost cells (2, 3), the length of
-# its seam or 0 (4), the axis of the ring at its poles or -1 (5), and whether each end is a pole (6, 7).
+# In the kernels `spline` is a position spline's table, coefficients and strides; `stop` the residual and the step (in
+# cells) below which a point is found; `frame` holds for each axis its ends (0, 1), the widths of its outermost cells
+# (2, 3), the length of its seam or 0 (4), the axis of the ring at its poles or -1 (5), and which ends are poles (6, 7).
 
 
 @compute.kernel
-def _newton(
-    x, tangents, start, chained, nodes, pieces, first, offsets, coefficients, strides, frame, tiny, q, dq, state
-):
+def _newton(x, tangents, start, chained, spline, frame, stop, q, dq, state):
     """Solve X(q) = x for every point; chained: each starts from the one before."""
+    nodes, pieces, first, offsets, coefficients, strides = spline
     cells, b, work = offsets[:3].copy(), np.empty((3, 2, 6)), np.empty((3, 18))
     value, jacobian, step, old = np.empty(3), np.empty((3, 3)), np.empty(3), np.empty(3)
     g, known, inverse = np.empty(3), np.empty(3), np.empty((3, 3))
@@ -217,27 +220,7 @@ def _newton(
             length = 0
         before = along
         if found == _LOST:
-            found = _solve(
-                g,
-                known,
-                inverse,
-                here,
-                nodes,
-                pieces,
-                first,
-                offsets,
-                coefficients,
-                strides,
-                frame,
-                tiny,
-                cells,
-                b,
-                work,
-                value,
-                jacobian,
-                step,
-                old,
-            )
+            found = _solve(g, known, inverse, here, spline, frame, stop, (cells, b, work, value, jacobian, step, old))
         state[n] = found
         linked = chained and found != _LOST
         length = _remember(trail, length, g, frame) if found == _FOUND else 0
@@ -310,28 +293,11 @@ def _on_turn(value, low, turn):
 
 
 @compute.kernel
-def _solve(
-    g,
-    known,
-    inverse,
-    x,
-    nodes,
-    pieces,
-    first,
-    offsets,
-    coefficients,
-    strides,
-    frame,
-    tiny,
-    cells,
-    b,
-    work,
-    value,
-    jacobian,
-    step,
-    old,
-):
+def _solve(g, known, inverse, x, spline, frame, stop, scratch):
     """Newton's method from g; `known` becomes the position that belongs to g, `inverse` dq/dx there."""
+    nodes, pieces, first, offsets, coefficients, strides = spline
+    tiny, last_step = stop
+    cells, b, work, value, jacobian, step, old = scratch
     _leave_poles(g, frame, 1e-3)
     worst, scale, last_walls, arrived = np.inf, 1.0, 0, False
     for _ in range(_STEPS):
@@ -356,7 +322,7 @@ def _solve(
             size = max(size, part)
             if not (walls >> d) & 1:
                 inner = max(inner, part)
-        if error <= tiny or size <= _LAST_STEP:
+        if error <= tiny or size <= last_step:
             if error > tiny:
                 _advance(g, step, 1.0, frame)
             _copy(x, known)

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.grids.grid import Grid
+from fieldmover.interpolation.aligned import same_coordinates
 from fieldmover.interpolation.locate import Locator
 
 Array = NDArray[np.float64]
@@ -64,7 +65,11 @@ class View:
             for nodes, begin, part in zip(self.grid.nodes, first, block, strict=True)
         )
         x = np.stack(self.grid.map.to_cartesian(q1[:, None, None], q2[None, :, None], q3[None, None, :]))
-        xi = self.locator.coordinates(x.reshape(3, -1))
+        if same_coordinates(self.grid, self.onto):  # exactly: cells of one grid may be parts of those of the other
+            same = np.broadcast_arrays(q1[:, None, None], q2[None, :, None], q3[None, None, :])
+            xi = np.stack(same).reshape(3, -1)
+        else:
+            xi = self.locator.coordinates(x.reshape(3, -1))
         _to_index(xi, *self.onto.nodes)
         return x, xi.reshape(x.shape), [part.start - begin for part, begin in zip(block, first, strict=True)]
 
