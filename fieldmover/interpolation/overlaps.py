@@ -30,14 +30,17 @@ Index = NDArray[np.int64]
 OFFSET_SCALE = 65534.0
 """Offsets of -1/2 to 1/2 of a source cell are stored as 16-bit integers, this many steps a cell."""
 
+TINY = 1e-6
+"""Parts of a cell below this are round-off."""
+
+TURN = 0.4
+"""Part of a ring that a cell may span."""
+
 _TABLE = 1 << 15  # source cells that one target cell may span before the source is cut instead
 _SPLIT = 2  # least number of sub-boxes along each axis of a cell
 _WIDTH = 1.0  # widest sub-box along an axis of its own grid, in cells of the other
 _UNEVEN = 1.25  # largest ratio of Jacobians within the middle half of a cell that counts as a parallelepiped
 _BULGE = 0.05  # largest difference between the volume of a cell and that of its eight corners
-_TURN = 0.4  # part of a ring that a cell may span
-_FINEST = 16  # parcels along an axis of a source cell
-_TINY = 1e-6  # parts of a cell below this are round-off
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,9 +72,7 @@ class Overlaps:
         return self.rows, self.start, self.cell, self.part, self.offset
 
 
-def overlaps(
-    view: View, block: Block, volumes: Array, chosen: Flags | None = None
-) -> tuple[Overlaps, Array, Flags]:
+def overlaps(view: View, block: Block, volumes: Array, chosen: Flags | None = None) -> tuple[Overlaps, Array, Flags]:
     """Overlaps of a block of cells, as far as they are regular.
 
     Parameters
@@ -115,43 +116,6 @@ def overlaps(
     return found, reach, irregular
 
 
-def seen(view: View, marked: Flags) -> tuple[Flags, Flags, NDArray[np.int8]]:
-    """How the cells of a view lie in the other grid.
-
-    Parameters
-    ----------
-    view : View
-    marked : ndarray of bool
-        Cells of the other grid.
-
-    Returns
-    -------
-    whole : ndarray of bool, shape of the grid
-        All eight corners are inside.
-    near : ndarray of bool
-        The cell may touch one of the `marked` cells.
-    split : ndarray of int8, shape (n1, n2, n3, 3)
-        Parcels along each axis that make a parcel at most half a cell of the other grid.
-    """
-    table = np.zeros([n + 1 for n in marked.shape], dtype=np.int32)
-    table[1:, 1:, 1:] = marked
-    for axis in range(3):
-        np.cumsum(table, axis=axis, out=table)
-    whole, near = np.empty(view.grid.shape, dtype=np.bool_), np.zeros(view.grid.shape, dtype=np.bool_)
-    split = np.ones((*view.grid.shape, 3), dtype=np.int8)
-
-    def work(block: Block) -> None:
-        _, eta, _ = view.nodes(block, 0)
-        low, high = eta.min(axis=(1, 2, 3)), eta.max(axis=(1, 2, 3))
-        whole[block] = inside = bool(((low >= -_TINY) & (high <= view.shape + _TINY)).all())
-        if inside and not _marks(table, low, high):
-            return  # the whole block lies inside and far from marked cells
-        _seen(eta, view.shape, *view.closure, table, whole[block], near[block], split[block])
-
-    compute.for_each(work, view.blocks)
-    return whole, near, split
-
-
 def collect(receiver: Index, giver: Index, part: Array, offset: NDArray[np.int16]) -> Overlaps:
     """Bring overlaps into rows."""
     order = np.argsort(receiver, kind="stable")
@@ -165,18 +129,8 @@ def collect(receiver: Index, giver: Index, part: Array, offset: NDArray[np.int16
     )
 
 
-def _marks(table: NDArray[np.int32], low: Array, high: Array) -> bool:
-    """Whether there are marks in a box of index coordinates, widened by half its size."""
-    last = np.array(table.shape) - 1
-    pad = 0.5 * (high - low)
-    a1, a2, a3 = np.clip(np.floor(low - pad), 0, last).astype(int)
-    b1, b2, b3 = np.clip(np.ceil(high + pad), 0, last).astype(int)
-    corner = np.diff(np.diff(np.diff(table[np.ix_([a1, b1], [a2, b2], [a3, b3])], axis=0), axis=1), axis=2)
-    return bool(corner.item() > 0)
-
-
 @compute.kernel
-def _corners(xi, i, j, k, shape, turns, rings, ends, c):
+def corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c):
     """Index coordinates of the corners of a cell (corner number: 4 a + 2 b + c), made continuous; False if NaN.
 
     A corner on a pole has no azimuth of its own and takes that of the corners it shares an edge with.
@@ -232,8 +186,7 @@ def _polynomial(c, p):
 def _value(p, d, a, b, e):
     """Component d of a trilinear function."""
     return (
-        p[0, d] + a * p[1, d] + b * (p[2, d] + a * p[4, d])
-        + e * (p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d]))
+        p[0, d] + a * p[1, d] + b * (p[2, d] + a * p[4, d]) + e * (p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d]))
     )
 
 
@@ -272,14 +225,14 @@ def _overlaps(x, xi, volume, chosen, own, shape, turns, rings, ends, start, cell
                 irregular[i, j, k] = False
                 if not chosen[i, j, k]:
                     continue
-                regular = _corners(xi, i, j, k, shape, turns, rings, ends, c)
+                regular = corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c)
                 outside, far, entries = False, False, 1
                 for d in range(3):
                     low[d], high[d] = c[0, d], c[0, d]
                     for n in range(1, 8):
                         low[d], high[d] = min(low[d], c[n, d]), max(high[d], c[n, d])
                     span = high[d] - low[d]
-                    if not span < _TABLE - 2 or (turns[d] > 0 and span > _TURN * turns[d]):
+                    if not span < _TABLE - 2 or (turns[d] > 0 and span > TURN * turns[d]):
                         regular = False
                         break
                     if turns[d] == 0:
@@ -358,7 +311,7 @@ def _overlaps(x, xi, volume, chosen, own, shape, turns, rings, ends, start, cell
                                         table[line + h, 1] += amount * centre[0, f]
                                         table[line + h, 2] += amount * centre[1, g]
                                         table[line + h, 3] += amount * centre[2, h]
-                reach[i, j, k] = 1.0 if kept > (1 - _TINY) * total else kept / total
+                reach[i, j, k] = 1.0 if kept > (1 - TINY) * total else kept / total
                 for n in range(entries):
                     amount = table[n, 0]
                     if amount > 1e-7 * total:
@@ -400,54 +353,3 @@ def _regular(p, y, volume, t, own):
         least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
     even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
     return even and abs(own[0, 0] - volume) <= _BULGE * volume
-
-
-@compute.kernel
-def _seen(eta, shape, turns, rings, ends, table, whole, near, split):
-    """See `seen`; table is the sum of the marks over all lower indices."""
-    c = np.empty((8, 3))
-    low, high = np.empty(3, np.int64), np.empty(3, np.int64)
-    marks = table[-1, -1, -1] > 0
-    for i in range(whole.shape[0]):
-        for j in range(whole.shape[1]):
-            for k in range(whole.shape[2]):
-                inside = _corners(eta, i, j, k, shape, turns, rings, ends, c)
-                some = True
-                for d in range(3):
-                    left, right = np.inf, -np.inf
-                    for n in range(8):
-                        if not np.isnan(c[n, d]):
-                            left, right = min(left, c[n, d]), max(right, c[n, d])
-                    if left > right:
-                        some = False
-                        break
-                    if turns[d] == 0 and not (left >= -_TINY and right <= shape[d] + _TINY):
-                        inside = False
-                    pad = 0.5 * (right - left)
-                    if turns[d] > 0 and (left < pad or right > shape[d] - pad or right - left > _TURN * turns[d]):
-                        low[d], high[d] = 0, shape[d]
-                    else:
-                        low[d] = np.int64(min(max(np.floor(left - pad), 0.0), shape[d]))
-                        high[d] = np.int64(min(max(np.ceil(right + pad), 0.0), shape[d]))
-                whole[i, j, k] = inside
-                near[i, j, k] = False
-                if some and marks:
-                    number = (
-                        table[high[0], high[1], high[2]] - table[low[0], high[1], high[2]]
-                        - table[high[0], low[1], high[2]] - table[high[0], high[1], low[2]]
-                        + table[low[0], low[1], high[2]] + table[low[0], high[1], low[2]]
-                        + table[high[0], low[1], low[2]] - table[low[0], low[1], low[2]]
-                    )
-                    near[i, j, k] = number > 0
-                for d in range(3):
-                    step, widest = 4 >> d, 0.0
-                    for n in range(8):
-                        if not n & step:
-                            for f in range(3):
-                                span = abs(c[n | step, f] - c[n, f])
-                                if span > widest:
-                                    widest = span
-                    parts = 1
-                    while parts < 2 * widest and parts < _FINEST:
-                        parts *= 2
-                    split[i, j, k, d] = parts

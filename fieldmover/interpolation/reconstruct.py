@@ -40,7 +40,7 @@ def reconstruct(grid: Grid, field: Array) -> Array:
     >>> reconstruct(fm.cartesian_grid([0, 1, 2, 4], [0, 1], [0, 1]), np.array([0.0, 1.0, 2.5]).reshape(3, 1, 1))[1]
     array([1. , 1. , 0. , 0. , 1.5, 1. ])
     """
-    padded = _with_neighbours(grid, field)
+    padded = with_neighbours(grid, field, 1)
     weights = [_slope_weights(grid, axis) for axis in range(3)]
     form = np.empty((*grid.shape, 6))
     compute.for_each(
@@ -50,21 +50,38 @@ def reconstruct(grid: Grid, field: Array) -> Array:
     return form.reshape(-1, 6)
 
 
-def _with_neighbours(grid: Grid, field: Array) -> Array:
-    """The field with one more cell at every end: across the seam, across the pole, at walls the cell itself."""
-    padded = np.empty([n + 2 for n in grid.shape])
-    padded[1:-1, 1:-1, 1:-1] = field
+def with_neighbours(grid: Grid, field: Array, width: int) -> Array:
+    """A cell field with more cells at every end: across the seam, across the pole; at walls the last cell repeated.
+
+    Parameters
+    ----------
+    grid : Grid
+    field : ndarray, shape (n1, n2, n3)
+    width : int
+        Cells more at each end of every axis.
+
+    Returns
+    -------
+    ndarray, shape (n1 + 2 width, n2 + 2 width, n3 + 2 width)
+    """
+    padded = np.empty([n + 2 * width for n in grid.shape])
+    padded[(slice(width, -width),) * 3] = field
     for axis in sorted(range(3), key=lambda d: not crosses_pole(grid, d)):  # poles first: they need a whole ring
-        for ghost, edge, across in ((0, 1, -2), (-1, -2, 1)):
-            source = at(axis, across if grid.periodic[axis] else edge)
-            values = padded[source]
-            ring = grid.ring_axis[axis] if crosses_pole(grid, axis) else None
-            if ring is not None and (0 if ghost == 0 else grid.shape[axis]) in grid.pole_ends(axis):
-                values = values.copy()
-                along = ring - (ring > axis)
-                middle = (slice(None),) * along + (slice(1, -1),)
-                values[middle] = np.roll(values[middle], grid.shape[ring] // 2, axis=along)
-            padded[at(axis, ghost)] = values
+        n, ring = grid.shape[axis], grid.ring_axis[axis] if crosses_pole(grid, axis) else None
+        for g in range(width):
+            for ghost, edge, inward, wrapped in (
+                (width - 1 - g, 0, min(g, n - 1), (-1 - g) % n),
+                (width + n + g, n, n - 1 - min(g, n - 1), g % n),
+            ):
+                across_pole = ring is not None and edge in grid.pole_ends(axis)
+                place = wrapped if grid.periodic[axis] else inward if across_pole else min(edge, n - 1)
+                values = padded[at(axis, width + place)]
+                if across_pole and ring is not None:
+                    values = values.copy()
+                    along = ring - (ring > axis)
+                    middle = (slice(None),) * along + (slice(width, -width),)
+                    values[middle] = np.roll(values[middle], grid.shape[ring] // 2, axis=along)
+                padded[at(axis, ghost)] = values
     return padded
 
 
