@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+import tomllib
 
 import h5py
 import numpy as np
@@ -13,6 +14,7 @@ from fieldmover.jobs.demo import job_text, write_snapshot
 from fieldmover.jobs.guess import Guess, guess
 from fieldmover.jobs.load import load
 from fieldmover.jobs.survey import UNKNOWN, survey
+from fieldmover.jobs.survey import job_text as written
 from fieldmover.jobs.worker import Options, work
 from fieldmover.snapshots.gate import Item, Snapshot
 from fieldmover.snapshots.layout import Layout, staggering
@@ -27,8 +29,7 @@ def stored(at, names, cells, order="q1 q2 q3", ghosts=(0, 0, 0)):
     """Three components as a file would hold them."""
     layout = Layout(order, ghosts)
     return {
-        name: np.zeros(layout.stored_shape(tuple(np.add(cells, staggering(at, d)))))
-        for d, name in enumerate(names)
+        name: np.zeros(layout.stored_shape(tuple(np.add(cells, staggering(at, d))))) for d, name in enumerate(names)
     }
 
 
@@ -43,9 +44,7 @@ CELLS = (6, 8, 11)
 def test_layouts_are_read_from_shapes(order, at, ghosts, centres):
     axes = [0.5 * (q[1:] + q[:-1]) if centres else q for q in (X, Y, Z)]
     names = ("/bx", "/by", "/bz")
-    found = seen(
-        {**dict(zip(("/x", "/y", "/z"), axes, strict=True)), **stored(at, names, CELLS, order, ghosts)}
-    )
+    found = seen({**dict(zip(("/x", "/y", "/z"), axes, strict=True)), **stored(at, names, CELLS, order, ghosts)})
     assert (found.kind, found.order, found.at, found.centres) == ("cartesian", order, at, centres)
     assert tuple(found.ghosts) == ghosts
     assert found.magnetic == names
@@ -93,6 +92,32 @@ def test_ghosts_that_an_attribute_tells():
     assert seen(arrays).ghosts == [2, 2, 2]
 
 
+def test_what_is_left_out_is_named():
+    arrays = {"/x": X, "/y": Y, "/z": Z, **stored("cells", ("/b/x", "/b/y", "/b/z"), CELLS)}
+    arrays |= {"/rho": np.zeros(CELLS), "/eint": np.zeros(CELLS), "/mask": np.zeros((2, 2, 2))}
+    (said,) = [why for what, _, why in seen(arrays).reasons if what == "left out"]
+    assert said.startswith("/eint: ")
+    del arrays["/eint"]
+    assert "left out" not in [what for what, *_ in seen(arrays).reasons]
+
+
+def test_what_viewers_see_is_not_taken_for_the_state():
+    arrays = {"/x": X, "/y": Y, "/z": Z, **stored("cells", ("/b/x", "/b/y", "/b/z"), CELLS)}
+    arrays |= {"/VTKHDF/CellData/density": np.zeros(CELLS), "/density": np.zeros(CELLS)}
+    found = seen(arrays)
+    assert found.density == "/density"
+    assert "left out" not in [what for what, *_ in found.reasons]
+
+
+def test_names_cannot_break_out_of_a_comment(tmp_path):
+    found = Guess(magnetic=("/bx", "/by", "/bz"))
+    found.say("left out", "sure", '/a\n[limits]\ndivergence = 9\r# "')
+    text = written(tmp_path / "a\nb\U0001f9f2.h5", tmp_path / "job.toml", found)
+    job = tomllib.loads(text)
+    assert job["limits"]["divergence"] == 1e-12
+    assert job["source"]["file"] == "a\nb\U0001f9f2.h5"
+
+
 def test_a_file_of_nothing_that_is_known(tmp_path):
     path = tmp_path / "odd.h5"
     with h5py.File(path, "w") as file:
@@ -119,6 +144,7 @@ def test_the_job_for_the_demo_runs_when_the_marks_are_filled_in(tmp_path, capsys
     ):
         assert words in said
     text = job.read_text()
+    assert "# ghosts (likely): [3, 3, 3]: angles reach beyond their range" in text
     assert work(Options("move", str(job), quiet=True)) == 2
     told = capsys.readouterr().err
     places = [count for count, line in enumerate(text.splitlines(), 1) if UNKNOWN in line]

@@ -37,6 +37,8 @@ BASES = {
 SCALARS = {"density": r"rho|dens|density|d"}
 GHOSTS = r"n?_?(?:ghosts?|ghost_cells|ghost_zones|nghost|ng|nguard|guard|halo)"
 MOST_GHOSTS = 8
+VIEW = "/VTKHDF/"
+"""What viewers see, a copy of what lies elsewhere."""
 CLOSE = 1e-5  # a full turn in single precision, ghosts added
 
 
@@ -93,7 +95,9 @@ def guess(items: Sequence[Item], read: Callable[[str], Array]) -> Guess:
         Name of a one-dimensional dataset to its numbers.
     """
     found = Guess()
-    usable = [item for item in items if item.refused is None and "@" not in item.name]
+    usable = [
+        item for item in items if item.refused is None and "@" not in item.name and not item.name.startswith(VIEW)
+    ]
     lines = {item.name: item.shape[0] for item in usable if len(item.shape) == 1 and item.shape[0] > 1}
     boxes = {item.name: item.shape for item in usable if len(item.shape) == 3}
     _axes(found, [name for name in lines if _increases(read(name))])

@@ -79,6 +79,17 @@ def table(rows: Iterable[tuple[str, ...]], heads: tuple[str, ...]) -> str:
     )
 
 
+def bound(value: float) -> str:
+    """A limit as people write it.
+
+    Examples
+    --------
+    >>> bound(1e-12), bound(0.02)
+    ('1e-12', '0.02')
+    """
+    return f"{value:.6g}"
+
+
 def short(value: float | None) -> str:
     """A number for the table.
 
@@ -92,3 +103,22 @@ def short(value: float | None) -> str:
     if value == 0 or 1e-3 <= abs(value) < 1e5:
         return f"{value:.6g}"
     return f"{value:.3e}"
+
+
+def said(value: Any) -> str:
+    """A value of a job or a record, as text.
+
+    Examples
+    --------
+    >>> said(["/bx", "/by"]), said(False), said(1e-12), said(None), said({"from": 0, "to": 1})
+    ('/bx, /by', 'no', '1.000e-12', 'none', 'from 0, to 1')
+    """
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, float):
+        return short(value)
+    if isinstance(value, Mapping):
+        return ", ".join(f"{key} {said(v)}" for key, v in value.items())
+    if isinstance(value, list | tuple):
+        return ", ".join(said(v) for v in value)
+    return "none" if value is None else str(value)

@@ -40,10 +40,17 @@ caption { text-align: left; font-weight: 600; padding: 0.9rem 0 0.3rem; }
 th, td {
   padding: 0.3rem 0.8rem 0.3rem 0; text-align: right; border-bottom: 1px solid var(--rule); white-space: nowrap;
 }
-th:first-child, td:first-child { text-align: left; font-weight: normal; }
-.grid { display: grid; grid-template-columns: repeat(auto-fit, minmax(min(100%, 20rem), 1fr)); gap: 1rem; }
+th:first-child, td:first-child {
+  text-align: left; font-weight: normal; position: sticky; left: 0; background: var(--back);
+}
+.block { max-width: 100%; }
+.block > p { margin: 0.4rem 0; max-width: 44rem; }
+.blocks { display: flex; flex-wrap: wrap; gap: 0 3rem; }
+th.part { padding-left: 1.2rem; }
+td.long { white-space: normal; overflow-wrap: normal; min-width: 12rem; }
+.number { white-space: nowrap; }
+.grid { display: grid; grid-template-columns: repeat(auto-fit, minmax(min(100%, 24rem), 1fr)); gap: 1rem; }
 figure { margin: 0.6rem 0 0; padding: 0.6rem; background: var(--card); border-radius: 0.3rem; break-inside: avoid; }
-figure img { width: 100%; max-width: 36rem; height: auto; background: #ffffff; display: block; margin: 0 auto; }
 figure svg { width: 100%; max-width: 36rem; height: auto; display: block; margin: 0 auto; }
 figcaption { font-size: 0.9rem; color: var(--faint); padding-top: 0.4rem; }
 svg text { fill: var(--text); font: 12px system-ui, sans-serif; }
@@ -58,20 +65,31 @@ pre {
   overflow-wrap: normal;
 }
 code { overflow-wrap: anywhere; }
-dl { display: grid; grid-template-columns: minmax(7rem, max-content) 1fr; gap: 0.2rem 1rem; margin: 0; }
+dl { display: grid; grid-template-columns: fit-content(16rem) 1fr; gap: 0.2rem 1rem; margin: 0; }
 dt { color: var(--faint); }
 dd { margin: 0; }
-@media (max-width: 30rem) { th, td { padding-right: 0.5rem; font-size: 0.875rem; } }
+@media (max-width: 36rem) {
+  th, td { padding-right: 0.5rem; font-size: 0.875rem; }
+  th:first-child { white-space: normal; min-width: 7rem; }
+  dl { grid-template-columns: fit-content(8.5rem) 1fr; }
+}
 @media print {
   :root {
     color-scheme: light; --back: #ffffff; --card: #ffffff; --text: #000000; --faint: #333333; --rule: #999999;
     --good: #0b4a8a; --bad: #8a3300; --s0: #0b4a8a; --s1: #8a3300; --s2: #444444; --s3: #5f2d70;
   }
-  body { max-width: none; padding: 0; font-size: 10pt; }
+  @page { margin: 14mm; }
+  html { font-size: 9pt; }
+  body { max-width: none; padding: 0; }
   nav, .skip { display: none; }
+  .verdict { border: 1pt solid; border-left-width: 0.5rem; }
   .scroll, pre { overflow: visible; }
+  .grid { grid-template-columns: repeat(auto-fit, minmax(18rem, 1fr)); }
+  th, td { padding: 0.15rem 0.6rem 0.15rem 0; }
+  th:first-child, td:first-child { position: static; white-space: normal; overflow-wrap: normal; }
+  td.long { min-width: 0; overflow-wrap: anywhere; }
   pre { white-space: pre-wrap; }
-  h2, h3 { break-after: avoid; }
+  h2, h3, caption { break-after: avoid; }
   tr { break-inside: avoid; }
 }
 """

@@ -7,15 +7,8 @@ import re
 from pathlib import Path
 from typing import Any
 
-from fieldmover.report.text import (
-    Rows,
-    against_table,
-    field_table,
-    fluid_table,
-    limit_rows,
-    region_table,
-    verdict,
-)
+from fieldmover.report.tables import Rows, brief
+from fieldmover.report.text import limit_rows, verdict
 from fieldmover.snapshots.write import unwritable
 
 STEP_SUMMARY = "GITHUB_STEP_SUMMARY"
@@ -35,15 +28,8 @@ def markdown(report: dict[str, Any]) -> str:
     sign = "❌" if any(not limit["passed"] for limit in report["limits"]) else "✅"
     parts = [f"## {sign} {_plain(verdict(report))}", _plain(report["title"])]
     if report["limits"]:
-        parts.append(_table(("limit", "found", "at most", "verdict"), limit_rows(report)))
-    for heads, rows in (
-        field_table(report),
-        fluid_table(report),
-        region_table(report),
-        against_table(report),
-    ):
-        if rows:
-            parts.append(_table(heads, rows))
+        parts.append(_table(("limit", "found", "allowed", "verdict"), limit_rows(report)))
+    parts += [_table(found.heads, found.rows) for found in brief(report)]
     parts += [f"- {role}: `{f['name']}`, SHA-256 `{f['sha256']}`" for role, f in report["files"].items()]
     return "\n\n".join(part for part in parts if part) + "\n"
 

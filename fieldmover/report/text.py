@@ -1,16 +1,11 @@
-"""The report on the terminal, and its tables, which the page and the summary share."""
+"""What a report says in words, and all of it on the terminal."""
 
 from __future__ import annotations
 
 from typing import Any
 
-from fieldmover.report.formats import short, table
-
-Rows = list[tuple[str, ...]]
-
-NORMS = (("largest", "linf"), ("root mean square", "l2"), ("mean", "l1"))
-LOST = (("cleaning", "cleaned"), ("moving", "moved"), ("storing", "stored"))
-TOTALS = ("source", "moved", "added_outside", "stored", "change")
+from fieldmover.report.formats import bound, short, table
+from fieldmover.report.tables import LOST, Rows, brief
 
 
 def terminal(report: dict[str, Any]) -> str:
@@ -21,13 +16,11 @@ def terminal(report: dict[str, Any]) -> str:
     report : dict
         As in report.json.
     """
-    heads, rows = field_table(report)
-    out = [table(rows, heads), ""]
-    for heads, rows in (fluid_table(report), region_table(report), against_table(report)):
-        if rows:
-            out += [table(rows, heads), ""]
+    out = []
+    for found in brief(report):
+        out += [table(found.rows, found.heads), ""]
     if report["limits"]:
-        out += [table(limit_rows(report), ("limit", "found", "at most", "")), ""]
+        out += [table(limit_rows(report), ("limit", "found", "allowed", "")), ""]
     memory = report["peak_memory"] / 2**30
     out.append(f"time {report['seconds']:.1f} s, memory {memory:.2f} GiB at most")
     out.append(verdict(report))
@@ -44,13 +37,47 @@ def verdict(report: dict[str, Any]) -> str:
     """
     limits = report["limits"]
     names = [
-        limit["name"] + (" (not measured)" if limit["value"] is None else "")
-        for limit in limits
-        if not limit["passed"]
+        limit["name"] + (" (not measured)" if limit["value"] is None else "") for limit in limits if not limit["passed"]
     ]
     if names:
         return f"limits exceeded: {', '.join(names)}"
     return str(report["verdict"]) if limits else "no limits were set"
+
+
+def in_short(report: dict[str, Any]) -> list[str]:
+    """What was kept and lost, in sentences."""
+    fields = report["fields"]
+    first, last = next(iter(fields.values())), list(fields.values())[-1]
+    before, after = (short(found["divergence"]["linf"]) for found in (first, last))
+    many = len(fields) > 1
+    said = [f"Divergence: at most {before} in the source" + (f", {after} in the field as stored." if many else ".")]
+    covered, lost = report["energy_covered"], report["figures"]["energy_lost"]
+    if covered:
+        steps = [f"{loss} {_took(lost[loss])}" for loss, _ in LOST if lost.get(loss) is not None]
+        told = f": {', '.join(steps)} of it" if steps else ""
+        energies = list(covered.values())
+        said.append(
+            f"Magnetic energy where the source reaches: {short(energies[0])} in the source, {short(energies[-1])} as "
+            f"stored{told}."
+        )
+    for name, found in report["fluid"].items():
+        said.append(
+            f"Total of {name}: {short(found['moved'])} of {short(found['source'])} lies in the target; as stored it "
+            f"differs by {short(found['change'])}, relative."
+        )
+    coverage = report["coverage"]
+    if coverage:
+        said.append(
+            f"The source reaches {100 * coverage['volume']:.4g} % of the volume of the target: of {coverage['cells']} "
+            f"cells it covers {coverage['whole']} wholly and {coverage['cut']} in part."
+        )
+    return said
+
+
+def _took(lost: float) -> str:
+    if lost == 0:
+        return "changed nothing"
+    return f"{'took' if lost > 0 else 'added'} {short(abs(lost))}"
 
 
 def limit_rows(report: dict[str, Any]) -> Rows:
@@ -77,64 +104,12 @@ def allowed(limit: dict[str, Any]) -> str:
     --------
     >>> allowed({"limit": 0.1, "reference": {"report": "good.json", "value": 2.0}})
     'within 0.1 of 2 (good.json)'
+    >>> allowed({"limit": 1e-12, "reference": None})
+    'at most 1e-12'
+    >>> allowed({"limit": 0.99, "reference": None, "least": True})
+    'at least 0.99'
     """
     reference = limit["reference"]
     if reference is None:
-        return short(limit["limit"])
-    return f"within {short(limit['limit'])} of {short(reference['value'])} ({reference['report']})"
-
-
-def field_table(report: dict[str, Any]) -> tuple[tuple[str, ...], Rows]:
-    """Divergence and energy along the steps of the job; what was lost at each, on a line of its own."""
-    fields, covered, lost = report["fields"], report["energy_covered"], report["figures"]["energy_lost"]
-    steps = list(fields)
-    rows: Rows = [
-        (f"divergence, {label}", *(short(fields[step]["divergence"][key]) for step in steps))
-        for label, key in NORMS
-    ]
-    rows.append(("magnetic energy, whole grid", *(short(fields[step]["energy"]["total"]) for step in steps)))
-    if covered:
-        rows.append(("magnetic energy, covered part", *(short(covered.get(step)) for step in steps)))
-        for loss, after in LOST:
-            if loss in lost:
-                rows.append(
-                    (
-                        f"  lost to {loss}, relative",
-                        *(short(lost[loss]) if step == after else "" for step in steps),
-                    )
-                )
-        last = short(report["figures"]["energy_change"])
-        rows.append(("  change in all, relative", *[""] * (len(steps) - 1), last))
-    return ("", *steps), rows
-
-
-def fluid_table(report: dict[str, Any]) -> tuple[tuple[str, ...], Rows]:
-    """Totals of conserved quantities."""
-    rows = [
-        (f"total of {name}", *(short(found[key]) for key in TOTALS))
-        for name, found in report["fluid"].items()
-    ]
-    return ("", "source", "moved", "added outside", "stored", "change"), rows
-
-
-def region_table(report: dict[str, Any]) -> tuple[tuple[str, ...], Rows]:
-    """Figures of the regions that the job names."""
-    keys = ("divergence", "energy", "energy_change", "strength")
-    rows = [
-        (f"region {name}", *(short(found[key]) for key in keys)) for name, found in report["regions"].items()
-    ]
-    return ("", "divergence", "energy", "change of energy", "largest |B|"), rows
-
-
-def against_table(report: dict[str, Any]) -> tuple[tuple[str, ...], Rows]:
-    """The field and its figures against those of another file."""
-    found = report["against"]
-    if found is None:
-        return ("",), []
-    field = report["figures"]["against"]
-    rows: Rows = [(name.replace("_", " "), "", short(value), "") for name, value in field.items()]
-    rows += [
-        (name, short(d["before"]), short(d["after"]), short(d["relative"]))
-        for name, d in found["figures"].items()
-    ]
-    return ("", report["files"]["other"]["name"], "target", "relative change"), rows
+        return f"at {'least' if limit.get('least') else 'most'} {bound(limit['limit'])}"
+    return f"within {bound(limit['limit'])} of {short(reference['value'])} ({reference['report']})"

@@ -1,7 +1,11 @@
-"""A view of an output for general viewers: XDMF 3, an open XML format that points into the HDF5 file.
+"""A view of an output for general viewers, by two open standards: a group /VTKHDF in the file, an XDMF file beside it.
 
 Viewers know no fluxes through faces. They get averages over cells in Cartesian components, single precision, and the
-positions of the nodes; the numbers to go on with stay where the receiving code wants them.
+positions of the nodes; the numbers to go on with stay where the receiving code wants them. The arrays are stored once,
+in the group; the XDMF file, which older viewers need for grids that are not uniform boxes, points at them.
+
+VTKHDF 2.8 (Kitware, VTK documentation, "VTKHDF file format"): a uniform box is an ImageData, another box in line with
+the axes a RectilinearGrid, anything else a StructuredGrid.
 """
 
 from __future__ import annotations
@@ -9,14 +13,23 @@ from __future__ import annotations
 import xml.etree.ElementTree as ElementTree
 from collections.abc import Mapping
 from pathlib import Path
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover.grids.grid import Grid
-from fieldmover.snapshots.write import Output
+from fieldmover.grids.placement import placement
+from fieldmover.snapshots.write import Attribute, Output
 
 Array = NDArray[np.float64]
+Shape = Literal["ImageData", "RectilinearGrid", "StructuredGrid"]
+
+GROUP = "/VTKHDF"
+VERSION = (2, 8)
+COORDINATES = ("XCoordinates", "YCoordinates", "ZCoordinates")
+UNIFORM = 1e-10
+"""Cells of a uniform axis differ by less, relative."""
 
 
 def sidecar(path: Path) -> Path:
@@ -24,36 +37,58 @@ def sidecar(path: Path) -> Path:
     return path.with_suffix(".xdmf")
 
 
-def write_view(output: Output, group: str, grid: Grid, fields: Mapping[str, Array]) -> None:
+def shape_of(grid: Grid) -> Shape:
+    """What the standard calls a grid.
+
+    Examples
+    --------
+    >>> import fieldmover as fm
+    >>> shape_of(fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1])), shape_of(fm.cartesian_grid([0, 1, 3], [0, 1], [0, 1]))
+    ('ImageData', 'RectilinearGrid')
+    """
+    if grid.kind != "cartesian" or placement(grid) is not None:
+        return "StructuredGrid"
+    steps = [np.diff(nodes) for nodes in grid.nodes]
+    return "ImageData" if all(np.ptp(h) <= UNIFORM * h.mean() for h in steps) else "RectilinearGrid"
+
+
+def write_view(output: Output, grid: Grid, fields: Mapping[str, Array]) -> None:
     """Store nodes and fields of cells as viewers want them: x fastest, vector components last.
 
     Parameters
     ----------
     output : Output
-    group : str
-        Where they go in the file.
     grid : Grid
     fields : mapping
         Name to (n1, n2, n3), or (3, n1, n2, n3) Cartesian components.
     """
-    if grid.kind == "cartesian":
-        for name, nodes in zip("xyz", grid.nodes, strict=True):
-            output.write(f"{group}/{name}", np.array(nodes))
+    shape = shape_of(grid)
+    about: dict[str, Attribute] = {"Version": np.array(VERSION, dtype=np.int64), "Type": shape}
+    if shape == "ImageData":
+        about["WholeExtent"] = np.array([(0, n) for n in grid.shape], dtype=np.int64).ravel()
+        about["Origin"], about["Spacing"] = _box(grid)
+        about["Direction"] = np.eye(3).ravel()
     else:
-        output.write(f"{group}/points", np.ascontiguousarray(grid.node_positions().transpose(3, 2, 1, 0)))
+        about["Dimensions"] = np.array([n + 1 for n in grid.shape], dtype=np.int64)
+    output.describe(GROUP, about)
+    if shape == "RectilinearGrid":
+        for name, nodes in zip(COORDINATES, grid.nodes, strict=True):
+            output.write(f"{GROUP}/{name}", np.array(nodes))
+    elif shape == "StructuredGrid":
+        output.write(f"{GROUP}/Points", np.ascontiguousarray(grid.node_positions().transpose(3, 2, 1, 0)))
     for name, values in fields.items():
         turned = values.transpose(3, 2, 1, 0) if values.ndim == 4 else values.transpose(2, 1, 0)
-        output.write(f"{group}/{_plain(name)}", np.ascontiguousarray(turned, dtype=np.float32))
+        output.write(_place(name), np.ascontiguousarray(turned, dtype=np.float32))
 
 
-def xdmf(file: str, group: str, grid: Grid, fields: Mapping[str, Array], time: float) -> str:
+def xdmf(file: str, grid: Grid, fields: Mapping[str, Array], time: float) -> str:
     """The text of the XDMF file for what `write_view` stored.
 
     Parameters
     ----------
     file : str
         Name of the HDF5 file, in the same folder.
-    group, grid, fields
+    grid, fields
         As in `write_view`.
     time : float
 
@@ -61,8 +96,8 @@ def xdmf(file: str, group: str, grid: Grid, fields: Mapping[str, Array], time: f
     --------
     >>> import fieldmover as fm
     >>> grid = fm.cartesian_grid([0, 1, 2], [0, 1], [0, 1])
-    >>> text = xdmf("a.h5", "/view", grid, {"rho": np.ones(grid.shape)}, 0.5)
-    >>> "a.h5:/view/rho" in text, 'Dimensions="1 1 2"' in text
+    >>> text = xdmf("a.h5", grid, {"rho": np.ones(grid.shape)}, 0.5)
+    >>> "a.h5:/VTKHDF/CellData/rho" in text, 'Dimensions="1 1 2"' in text
     (True, True)
     """
     n1, n2, n3 = grid.shape
@@ -70,32 +105,42 @@ def xdmf(file: str, group: str, grid: Grid, fields: Mapping[str, Array], time: f
     domain = ElementTree.SubElement(root, "Domain")
     mesh = ElementTree.SubElement(domain, "Grid", {"Name": "target", "GridType": "Uniform"})
     ElementTree.SubElement(mesh, "Time", {"Value": repr(float(time))})
-    straight = grid.kind == "cartesian"
-    topology = {
-        "TopologyType": "3DRectMesh" if straight else "3DSMesh",
-        "Dimensions": f"{n3 + 1} {n2 + 1} {n1 + 1}",
-    }
-    ElementTree.SubElement(mesh, "Topology", topology)
-    geometry = ElementTree.SubElement(mesh, "Geometry", {"GeometryType": "VXVYVZ" if straight else "XYZ"})
-    if straight:
-        for name, n in zip("xyz", grid.shape, strict=True):
-            _item(geometry, f"{file}:{group}/{name}", (n + 1,), 8)
+    topology, points = {
+        "ImageData": ("3DCoRectMesh", "ORIGIN_DXDYDZ"),
+        "RectilinearGrid": ("3DRectMesh", "VXVYVZ"),
+        "StructuredGrid": ("3DSMesh", "XYZ"),
+    }[shape_of(grid)]
+    sizes = {"TopologyType": topology, "Dimensions": f"{n3 + 1} {n2 + 1} {n1 + 1}"}
+    ElementTree.SubElement(mesh, "Topology", sizes)
+    geometry = ElementTree.SubElement(mesh, "Geometry", {"GeometryType": points})
+    if points == "ORIGIN_DXDYDZ":
+        for numbers in _box(grid):
+            _item(geometry, " ".join(repr(float(x)) for x in numbers[::-1]), (3,), 8, "XML")  # z first
+    elif points == "VXVYVZ":
+        for name, n in zip(COORDINATES, grid.shape, strict=True):
+            _item(geometry, f"{file}:{GROUP}/{name}", (n + 1,), 8)
     else:
-        _item(geometry, f"{file}:{group}/points", (n3 + 1, n2 + 1, n1 + 1, 3), 8)
+        _item(geometry, f"{file}:{GROUP}/Points", (n3 + 1, n2 + 1, n1 + 1, 3), 8)
     for name, values in fields.items():
         kind, shape = ("Vector", (n3, n2, n1, 3)) if values.ndim == 4 else ("Scalar", (n3, n2, n1))
         about = {"Name": name, "AttributeType": kind, "Center": "Cell"}
         attribute = ElementTree.SubElement(mesh, "Attribute", about)
-        _item(attribute, f"{file}:{group}/{_plain(name)}", shape, 4)
+        _item(attribute, f"{file}:{_place(name)}", shape, 4)
     ElementTree.indent(root)
     return '<?xml version="1.0" encoding="UTF-8"?>\n' + ElementTree.tostring(root, encoding="unicode") + "\n"
 
 
-def _item(parent: ElementTree.Element, where: str, shape: tuple[int, ...], precision: int) -> None:
-    about = {"Format": "HDF", "NumberType": "Float", "Precision": str(precision)}
+def _box(grid: Grid) -> tuple[Array, Array]:
+    """Lowest corner and size of the cells of a uniform box."""
+    first = np.array([nodes[0] for nodes in grid.nodes])
+    return first, np.array([(nodes[-1] - nodes[0]) / (nodes.size - 1) for nodes in grid.nodes])
+
+
+def _item(parent: ElementTree.Element, text: str, shape: tuple[int, ...], precision: int, form: str = "HDF") -> None:
+    about = {"Format": form, "NumberType": "Float", "Precision": str(precision)}
     item = ElementTree.SubElement(parent, "DataItem", {**about, "Dimensions": " ".join(map(str, shape))})
-    item.text = where
+    item.text = text
 
 
-def _plain(name: str) -> str:
-    return name.replace(" ", "_")
+def _place(name: str) -> str:
+    return f"{GROUP}/CellData/{name.replace(' ', '_')}"
