@@ -220,11 +220,73 @@ def test_a_map_that_turns(tmp_path, run):
     assert np.abs(found["vy"] - 2 * x).max() < 0.02
 
 
+def test_angular_momentum_is_kept_if_asked_for(run):
+    """A ring that turns about an axis off the centre of the grid."""
+    grid = fm.spherical_grid(np.linspace(0.1, 0.9, 17), np.linspace(0, np.pi, 13), np.linspace(0, 2 * np.pi, 25))
+    x, y, z = grid.centres()
+    density = np.exp(-((np.hypot(x, y) - 0.5) ** 2 + z * z) / 0.02)
+    arrays = {**uniform(grid.shape, v1=-(y - 0.1), v2=x, v3=0.0), "rho": density}
+    text = job(
+        grid=f'kind = "spherical"\nnodes = {[q.tolist() for q in grid.nodes]}',
+        magnetic='at = "cells"\ndata = ["/b1", "/b2", "/b3"]\nunit = 1\nbasis = "cartesian"',
+        fluid=COMMON["fluid"] + VELOCITY + 'basis = "cartesian"\n',
+        target=f'kind = "cartesian"\nnodes = {BOX.replace("cells = 8", "cells = 12")}',
+        out='density = "/rho"\nvelocity = ["/vx", "/vy", "/vz"]',
+        more='[move]\nkeep = "angular momentum"\naxis = { centre = [0, 0.1, 0] }',
+    )
+    box = fm.cartesian_grid(*[np.linspace(-1, 1, 13)] * 3)
+    whole = (density * grid.cell_volumes() * (x * x + (y - 0.1) ** 2)).sum()
+    sums = []
+    for what in (text, text.replace('keep = "angular momentum"\n', "")):
+        found, report = run(what, arrays)
+        bx, by, _ = box.centres()
+        mass = found["rho"] * box.cell_volumes()
+        sums.append((mass * (bx * found["vy"] - (by - 0.1) * found["vx"])).sum())
+        assert np.isclose(report["angular_momentum"]["stored"], sums[-1], rtol=1e-12)
+    assert abs(sums[0] / whole - 1) < 1e-12
+    assert abs(sums[1] / whole - 1) > 1e-6
+
+
+def test_a_transition_to_the_background(run):
+    wide = BOX.replace("cells = 8", "cells = 16").replace("-1", "-1.5").replace("to = 1", "to = 1.5")
+    text = job(
+        fluid=COMMON["fluid"] + '\n[source.fluid.tracer]\ndata = "/t"\ncarry = "point"',
+        target=f'kind = "cartesian"\nnodes = {wide}',
+        out='density = { data = "/rho", outside = 0.5 }\ntracer = { data = "/t", outside = 1.0 }',
+        more="[move]\nblend = 0.5",
+    )
+    found, report = run(text, uniform(t=3.0))
+    line = found["rho"][:, 8, 8]
+    assert line[0] == 0.5
+    assert line[8] == 2.0
+    assert (np.diff(line[:9]) >= 0).all()
+    assert ((line > 0.5 + 1e-9) & (line < 2 - 1e-9)).sum() > 2
+    assert found["t"].min() == 1.0
+    assert abs(found["t"].max() - 3.0) < 1e-12
+    assert report["fluid"]["density"]["removed_by_blend"] > 0
+    assert report["figures"]["mass_change"] < 1e-12
+
+
+def test_random_changes_without_divergence(run):
+    plain, _ = run(job(), uniform())
+    arrays = {**uniform(), "b3": 1 + np.random.default_rng(0).random(CELLS)}
+    before, _ = run(job(), arrays)
+    found, report = run(job(more="[move]\nperturb = { size = 0.01, seed = 5 }"), arrays)
+    again, _ = run(job(more="[move]\nperturb = { size = 0.01, seed = 5 }"), arrays)
+    other, _ = run(job(more="[move]\nperturb = { size = 0.01, seed = 6 }"), arrays)
+    assert 0 < np.abs(found["bz"] - before["bz"]).max() < 0.5
+    assert (found["bz"] == again["bz"]).all()
+    assert (found["bz"] != other["bz"]).any()
+    assert report["figures"]["divergence"] < 1e-14
+    assert report["perturbation"]["size"] == 0.01
+    assert plain["bx"].shape == found["bx"].shape
+
+
 HEALTH = "[health]\ndensity_floor = 0.5\n"
 
 
 @pytest.mark.parametrize("cure", ["refuse", "report", "apply"])
-def test_what_the_receiver_cannot_evolve(run, capsys, cure):
+def test_what_the_receiver_cannot_evolve(tmp_path, run, capsys, cure):
     arrays = uniform()
     arrays["rho"] = arrays["rho"].copy()
     arrays["rho"][:4] = 0.1
@@ -242,6 +304,9 @@ def test_what_the_receiver_cannot_evolve(run, capsys, cure):
     assert report["figures"]["mass_change"] < 1e-12  # what floors add is told apart
     added = report["fluid"]["density"]["added_by_cure"]
     assert np.isclose(added, rule["mass_added"]) if cure == "apply" else added == 0
+    assert work(Options("check", str(tmp_path / "job.toml"), quiet=True)) == 0
+    again = json.loads((tmp_path / "out-check" / "report.json").read_text())
+    assert again["figures"]["mass_change"] < 1e-12
 
 
 def test_the_metric_of_a_file(run):

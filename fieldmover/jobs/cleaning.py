@@ -8,14 +8,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.diagnostics import closed_walls
+from fieldmover.diagnostics import cell_energies, closed_walls
 from fieldmover.errors import ChargeError, DataError, FieldError, JobError
 from fieldmover.expressions import Expression
-from fieldmover.forms.fields import FaceFlux
+from fieldmover.forms import FaceFlux, curl
+from fieldmover.forms.symmetry import perturbed
 from fieldmover.grids.grid import at
+from fieldmover.interpolation.uniform import split_uniform
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import region_masks
+from fieldmover.projection.potential import potential
 from fieldmover.projection.project import project
 from fieldmover.projection.relax import relax, side_by_side
 
@@ -54,7 +57,7 @@ def cleaned(loaded: Loaded, flux: FaceFlux, record: Record, when: str, to_move: 
     if when == "never" or (when == "when needed" and divergence <= CLEAN_ENOUGH):
         return flux
     inner, _ = closed_walls(flux)
-    if loaded.job.clean.hole == "neutral" and inner is not None and abs(inner.net) > CHARGE * inner.gross:
+    if _hole(loaded, to_move) == "neutral" and inner is not None and abs(inner.net) > CHARGE * inner.gross:
         raise DataError(
             f"{loaded.source}: net magnetic flux {inner.net:.6g} through the closed inner wall, "
             f"{abs(inner.net) / inner.gross:.2g} of all that passes it; a field without monopoles has none"
@@ -64,7 +67,7 @@ def cleaned(loaded: Loaded, flux: FaceFlux, record: Record, when: str, to_move: 
             f"{loaded.path}: clean.excised: cells that may hold monopoles cannot be moved; leave the key out, or clean "
             "the snapshot on its own grid"
         )
-    how, regions = _arguments(loaded, flux)
+    how, regions = _arguments(loaded, flux, to_move)
     try:
         if loaded.job.clean.method == "relax":
             return _relaxed(loaded, flux, record, how, regions, to_move)
@@ -79,11 +82,41 @@ def cleaned(loaded: Loaded, flux: FaceFlux, record: Record, when: str, to_move: 
     return flux
 
 
-def _arguments(loaded: Loaded, flux: FaceFlux) -> tuple[dict[str, Any], dict[str, NDArray[np.bool_]]]:
+def perturbed_flux(loaded: Loaded, flux: FaceFlux, record: Record) -> FaceFlux:
+    """The field with the random changes that the job wants, which leave no divergence.
+
+    Raises
+    ------
+    DataError
+        If the field has no potential.
+    """
+    wanted = loaded.job.move.perturb
+    if wanted is None:
+        return flux
+    _, rest = split_uniform(flux)
+    try:
+        pot = potential(rest)
+    except ChargeError as error:
+        raise DataError(f"{loaded.source}: {error}") from None
+    changed = curl(perturbed(pot, wanted.size, wanted.seed))
+    a, b, c = (f + (new - old) for f, new, old in zip(flux.faces, changed.faces, curl(pot).faces, strict=True))
+    after = FaceFlux(flux.grid, (a, b, c))
+    before = float(cell_energies(flux).sum())
+    change = float(cell_energies(after).sum()) / before - 1.0 if before > 0 else None
+    record.values["perturbation"] = {"size": wanted.size, "seed": wanted.seed, "energy_change": change}
+    return after
+
+
+def _hole(loaded: Loaded, to_move: bool) -> str:
+    """Whether the hole in a shell may carry net flux: where a point charge takes it on, it may."""
+    return "free" if to_move and loaded.job.move.net_flux == "point" else loaded.job.clean.hole
+
+
+def _arguments(loaded: Loaded, flux: FaceFlux, to_move: bool) -> tuple[dict[str, Any], dict[str, NDArray[np.bool_]]]:
     """What `project` and `relax` are to keep, and the regions in which changes are counted."""
     job, grid = loaded.job, flux.grid
     masks = region_masks(grid, {name: job.regions[name] for name in job.clean.regions})
-    how: dict[str, Any] = {"walls": job.clean.walls, "hole": job.clean.hole}
+    how: dict[str, Any] = {"walls": job.clean.walls, "hole": _hole(loaded, to_move)}
     if job.clean.weights is not None:
         formula = Expression(job.clean.weights, ["B"])
         how["weights"] = lambda strength: formula.evaluate({"B": strength}, strength.shape)

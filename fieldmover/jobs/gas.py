@@ -54,6 +54,16 @@ def extreme_figures(state: State) -> tuple[dict[str, float | None], dict[str, di
     return values, places
 
 
+def gas_sums(state: State) -> dict[str, Any]:
+    """Sums over the gas of the whole grid; empty without density."""
+    if MASS not in state.fluid:
+        return {}
+    mass = CellContent(state.grid, state.fluid[MASS] * state.elements)
+    velocity = state.fluid.get(VELOCITY) if state.space.geometry is None else None
+    found = fluid_sums(mass, velocity, state.fluid.get(ENERGY)).as_dict()
+    return {name: _plain(name, None if sums is None else np.atleast_1d(sums)) for name, sums in found.items()}
+
+
 def gas_figures(source: State, stored: State, plan: FluidPlan) -> dict[str, dict[str, Any]]:
     """Sums over the gas of the cells that the source covers wholly, before and after.
 

@@ -14,7 +14,8 @@ from fieldmover.conventions.velocity import grid_velocity
 from fieldmover.errors import DataError, GridError, JobError
 from fieldmover.grids.grid import Grid
 from fieldmover.grids.kerr import kerr_schild_grid
-from fieldmover.grids.placement import turn_about
+from fieldmover.grids.nested import NestedGrid, nested_grid
+from fieldmover.grids.placement import placement, turn_about
 from fieldmover.grids.tabulated import nodes_from_centres
 from fieldmover.grids.warps import Function, crowded_grid, crowded_map, load_map
 from fieldmover.jobs.load import Loaded
@@ -115,6 +116,41 @@ def target_grid(loaded: Loaded) -> Grid:
     with Snapshot(path) as snapshot:
         nodes = _target_nodes(snapshot, wanted)
     return at_place(_made(loaded, "target", nodes, f"{path}", True), wanted.place)
+
+
+def nested_target(loaded: Loaded, grid: Grid) -> NestedGrid | None:
+    """The target with its finer boxes, at its place; None if the job has none.
+
+    Parameters
+    ----------
+    loaded : Loaded
+    grid : Grid
+        As `target_grid` makes it.
+
+    Raises
+    ------
+    JobError
+        If the boxes do not fit into each other.
+    """
+    wanted = loaded.job.target.grid
+    if wanted is None or not wanted.finer:
+        return None
+    levels: list[list[tuple[Array, Array, Array]]] = [[grid.nodes]]
+    for level in range(1, max(box.level for box in wanted.finer) + 1):
+        boxes = [[own_nodes(axis) for axis in box.nodes] for box in wanted.finer if box.level == level]
+        levels.append([(a, b, c) for a, b, c in boxes])
+    try:
+        nested = nested_grid(levels)
+    except GridError as error:
+        raise JobError(f"{loaded.path}: target.grid.finer: {error}") from None
+    where = placement(grid)
+    return nested if where is None else nested.placed(*where)
+
+
+def groups_of(loaded: Loaded) -> list[str]:
+    """Groups of the output that hold the finer boxes, in the order of the nested grid."""
+    wanted = loaded.job.target.grid
+    return [] if wanted is None else [box.group for box in sorted(wanted.finer, key=lambda box: box.level)]
 
 
 def own_nodes(axis: Any) -> Array:

@@ -5,17 +5,18 @@ from __future__ import annotations
 from collections.abc import Mapping
 from contextlib import suppress
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import binary_erosion
 
-from fieldmover.diagnostics import Surface, compare_fields, stencil_divergence
+from fieldmover.diagnostics import Surface, compare_fields, differences, stencil_divergence
 from fieldmover.errors import FieldError, GridError, JobError
-from fieldmover.forms.fields import FaceFlux
 from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.fluid import FluidPlan
 from fieldmover.jobs.details import helicity_figures
-from fieldmover.jobs.gas import extreme_figures, gas_figures
+from fieldmover.jobs.gas import extreme_figures, gas_figures, gas_sums
 from fieldmover.jobs.grids import target_grid
 from fieldmover.jobs.load import Loaded, load
 from fieldmover.jobs.names import STRENGTH
@@ -31,7 +32,7 @@ COMPARED = 1 << 18
 
 
 def measure_more(record: Record, loaded: Loaded, states: Mapping[str, State], surfaces: Mapping[str, Surface]) -> None:
-    """Flux through surfaces, helicity where the job asks for it, extremes, and agreement with the source.
+    """Flux through surfaces, helicity where the job asks for it, and extremes.
 
     Parameters
     ----------
@@ -52,9 +53,6 @@ def measure_more(record: Record, loaded: Loaded, states: Mapping[str, State], su
         if loaded.job.report.helicity:
             found = helicity_figures(state.flux)
             values["helicity_missing" if isinstance(found, str) else "helicity"][step] = found
-    if stored is not None:
-        with suppress(FieldError):  # a target that the source does not reach agrees with nothing
-            values["agreement"] = compare_fields(source.flux, stored.flux, COMPARED).as_dict()
 
 
 def cell_values(state: State, density: Array) -> dict[str, Array]:
@@ -63,9 +61,15 @@ def cell_values(state: State, density: Array) -> dict[str, Array]:
     return {STRENGTH: np.sqrt(2.0 * density), **scalars}
 
 
-def measure_gas(record: Record, source: State, stored: State, plan: FluidPlan) -> None:
-    """Sums over the gas before and after."""
+def measure_kept(record: Record, source: State, stored: State, plan: FluidPlan) -> None:
+    """Sums over the gas before and after, and the field against that of the source, where that reaches.
+
+    Fields are compared in cells that the source covers wholly, their neighbours too.
+    """
     record.values["gas"] = gas_figures(source, stored, plan)
+    whole = binary_erosion(plan.coverage >= 1.0, border_value=1)
+    with suppress(FieldError):  # a target that the source does not reach agrees with nothing
+        record.values["agreement"] = compare_fields(source.flux, stored.flux, whole, COMPARED).as_dict()
 
 
 def measure_stencil(record: Record, loaded: Loaded, grid: Grid, cells: Array | None) -> None:
@@ -95,8 +99,8 @@ def measure_stencil(record: Record, loaded: Loaded, grid: Grid, cells: Array | N
         raise JobError(f'{loaded.path}: target.magnetic.stencil = "{stencil}": {error}') from None
 
 
-def other_field(loaded: Loaded, space: Space, path: Path) -> tuple[Path, FaceFlux]:
-    """The field to compare a target with, and its file.
+def other_state(loaded: Loaded, space: Space, path: Path) -> State:
+    """What to compare a target with.
 
     Parameters
     ----------
@@ -112,6 +116,30 @@ def other_field(loaded: Loaded, space: Space, path: Path) -> tuple[Path, FaceFlu
         If the job is none or the file cannot be read as it says.
     """
     if path.suffix != ".toml":
-        return path, read_target(loaded, space, path).flux
+        return read_target(loaded, space, path)
     other = load(path)
-    return other.target, read_target(other, target_space(other, target_grid(other))).flux
+    return read_target(other, target_space(other, target_grid(other)))
+
+
+def measure_against(
+    record: Record, loaded: Loaded, other: State, stored: State, surfaces: Mapping[str, Surface]
+) -> None:
+    """The target against another state: the fields where the grids overlap, and all figures of each."""
+    record.against(other.flux, stored.flux)
+    found = differences(*(_figures(loaded, state, surfaces) for state in (other, stored)))
+    record.values["against"]["figures"].update({name: vars(difference) for name, difference in found.items()})
+
+
+def _figures(loaded: Loaded, state: State, surfaces: Mapping[str, Surface]) -> dict[str, Any]:
+    through = surface_figures(surfaces, state.flux, None)
+    found: dict[str, Any] = {
+        "surfaces": {
+            name: {"flux": figures["source_flux"], "unsigned": figures["source_unsigned"]}
+            for name, figures in through.items()
+        },
+        "gas": gas_sums(state),
+        "extremes": extreme_figures(state)[0],
+    }
+    if loaded.job.report.helicity and not isinstance(helicity := helicity_figures(state.flux), str):
+        found["helicity"] = helicity
+    return found

@@ -63,7 +63,7 @@ EXTREMES = ("b2_over_rho_largest", "beta_smallest", "beta_largest", "speed_large
 REGION = ("divergence", "energy", "energy_change", "strength")
 """Of a region, for the field as stored."""
 
-FLUID = ("source", "moved", "added_outside", "added_by_cure", "stored", "change")
+FLUID = ("source", "moved", "added_outside", "removed_by_blend", "added_by_cure", "stored", "change")
 """Of the total of a conserved quantity."""
 
 

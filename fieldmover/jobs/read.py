@@ -142,7 +142,8 @@ def read_target(loaded: Loaded, space: Space, path: Path | None = None) -> State
         If anything in it is missing, misshapen, not finite or refused.
     """
     target = loaded.job.target
-    layout, whole = Layout(target.axes), Completed(space.own, None)
+    g1, g2, g3 = target.ghosts
+    layout, whole = Layout(target.axes, (g1, g2, g3)), Completed(space.own, None)
     path = path or loaded.target
     with Snapshot(path) as snapshot:
         flux = _read_flux(snapshot, whole, target.magnetic, target.magnetic.at, layout, space)
@@ -152,7 +153,8 @@ def read_target(loaded: Loaded, space: Space, path: Path | None = None) -> State
 
 def read_cells(loaded: Loaded, grid: Grid) -> Array | None:
     """The components of the field as stored, Heaviside-Lorentz, shape (3, n1, n2, n3); None where not at cells."""
-    magnetic, layout = loaded.job.target.magnetic, Layout(loaded.job.target.axes)
+    magnetic, (g1, g2, g3) = loaded.job.target.magnetic, loaded.job.target.ghosts
+    layout = Layout(loaded.job.target.axes, (g1, g2, g3))
     if magnetic.at != "cells":
         return None
     with Snapshot(loaded.target) as snapshot:

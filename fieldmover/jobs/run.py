@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -15,15 +16,33 @@ from fieldmover.errors import JobError
 from fieldmover.forms.fields import CellContent, FaceFlux
 from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.fluid import FluidPlan
-from fieldmover.jobs.cleaning import cleaned
+from fieldmover.jobs.boxes import (
+    Around,
+    Target,
+    around,
+    boxes_beside,
+    in_group,
+    measure_boxes,
+    move_field,
+    read_finer,
+    target_of,
+)
+from fieldmover.jobs.cleaning import cleaned, perturbed_flux
 from fieldmover.jobs.details import divergences, profile, spectra
 from fieldmover.jobs.fluid import move_fluid, totals
-from fieldmover.jobs.grids import target_grid
-from fieldmover.jobs.health import cured, mass_added
+from fieldmover.jobs.grids import groups_of, target_grid
+from fieldmover.jobs.health import cured, mass_added, stored_cures
 from fieldmover.jobs.load import Loaded
-from fieldmover.jobs.measure import cell_values, measure_gas, measure_more, measure_stencil, other_field
+from fieldmover.jobs.measure import (
+    cell_values,
+    measure_against,
+    measure_kept,
+    measure_more,
+    measure_stencil,
+    other_state,
+)
 from fieldmover.jobs.progress import Progress
-from fieldmover.jobs.read import State, read_cells, read_source, read_target, target_space
+from fieldmover.jobs.read import State, read_cells, read_source, read_target
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import Cells, by_place, region_figures, region_masks, surfaces_of
 from fieldmover.jobs.store import Store, bytes_needed
@@ -82,11 +101,10 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
     DataError, OutputError, NotConverged, NotEnoughMemory
         See `fieldmover.errors`.
     """
-    target = target_grid(loaded)
+    target = target_of(loaded, target_grid(loaded))
     check_output(loaded, overwrite)
-    space = target_space(loaded, target)
-    check_space(loaded.target, bytes_needed(loaded, target.shape))
-    work = _work(loaded, "move", target, folder, Progress(7, quiet))
+    check_space(loaded.target, _bytes_needed(loaded, target))
+    work = _work(loaded, "move", target.grid, folder, Progress(7, quiet))
     job, record, progress = loaded.job, work.record, work.progress
     with compiling_fluid():
         with progress.stage("reading"):
@@ -94,14 +112,18 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
         with progress.stage("cleaning"):
             clean_flux = cleaned(loaded, source.flux, record, job.move.clean, to_move=True)
             record.field("cleaned", clean_flux)
+        clean_flux = perturbed_flux(loaded, clean_flux, record)
         with progress.stage("moving the field"):
-            flux = fm.move_flux(clean_flux, target, order=job.move.order, outside=job.move.outside)
+            flux, more = move_field(loaded, clean_flux, target, record)
             record.field("moved", flux)
     with progress.stage("moving the fluid"):
-        plan = FluidPlan(source.grid, target)
-        fluid = move_fluid(job, source, space, plan, flux)
-        moved, record.values["health"] = cured(loaded, State(loaded.target, flux, space, fluid, source.time))
-    return _store(work, source, moved, plan, {"cleaned": clean_flux, "moved": flux}, overwrite)
+        plans, finer = boxes_beside(loaded, source, target, more)
+        fluid, angular = move_fluid(job, source, target.space, plans[0], flux)
+        record.values["angular_momentum"] = None if angular is None else angular.as_dict()
+        moved, record.values["health"] = cured(loaded, State(loaded.target, flux, target.space, fluid, source.time))
+        layers = None if target.ghosts is None else around(loaded, source, target, more[0])
+    steps = {"cleaned": clean_flux, "moved": flux}
+    return _store(work, source, moved, plans[0], steps, overwrite, finer, layers)
 
 
 def clean(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, quiet: bool = False) -> Outcome:
@@ -174,22 +196,26 @@ def check(
     with progress.stage("reading"):
         source = _source(loaded, record)
         clean = loaded.job.target.grid is None
-        space = source.space if clean else target_space(loaded, target_grid(loaded))
+        target = None if clean else target_of(loaded, target_grid(loaded))
+        space = source.space if target is None else target.space
         stored = read_target(loaded, space) if there else source
+        finer = [] if target is None or not there else read_finer(loaded, target)
         if there:
             record.file("target", loaded.target)
+            record.values["health"] = stored_cures(loaded.target)
     work = _work(loaded, "check", stored.grid, folder, progress, record)
     with progress.stage("measuring"):
         if there:
             record.field("stored", stored.flux)
             measure_stencil(record, loaded, space.grid, read_cells(loaded, space.grid))
+            measure_boxes(loaded, record, stored, finer)
             _compare(work, source, stored, FluidPlan(source.grid, stored.grid), {})
         else:
             measure_more(record, loaded, {"source": source}, work.surfaces)
         if against is not None:
-            path, other = other_field(loaded, space, against)
-            record.file("other", path)
-            record.against(other, stored.flux)
+            other = other_state(loaded, space, against)
+            record.file("other", other.path)
+            measure_against(record, loaded, other, stored, work.surfaces)
     outcome = _finish(work, source, stored if there else None)
     if make_limits is None:
         return outcome
@@ -197,6 +223,11 @@ def check(
     report = os.path.relpath(folder / "report.json", loaded.path.parent)  # as a job names files
     write_text(path, limits_table(record.values, record.names, make_limits, report))
     return replace(outcome, text=f"{outcome.text}\nlimits: {path}")
+
+
+def _bytes_needed(loaded: Loaded, target: Target) -> int:
+    grids = [target.grid if target.ghosts is None else target.ghosts.whole, *target.finer]
+    return sum(bytes_needed(loaded, grid.shape) for grid in grids)
 
 
 def report_folder(loaded: Loaded, suffix: str = "report") -> Path:
@@ -253,20 +284,31 @@ def _source(loaded: Loaded, record: Record) -> State:
 
 
 def _store(
-    work: Work, source: State, moved: State, plan: FluidPlan, steps: dict[str, FaceFlux], overwrite: bool
+    work: Work,
+    source: State,
+    moved: State,
+    plan: FluidPlan,
+    steps: dict[str, FaceFlux],
+    overwrite: bool,
+    finer: Sequence[State] = (),
+    layers: Around | None = None,
 ) -> Outcome:
     """Write the target, measure what was written, and report."""
     loaded, record, progress = work.loaded, work.record, work.progress
     with Output(loaded.target, overwrite, bytes_needed(loaded, moved.grid.shape)) as output:
         note(output.partial)
-        store = Store(loaded, output)
+        store = Store(loaded, output, layers)
+        beside = [Store(in_group(loaded, group), output) for group in groups_of(loaded)]
         with progress.stage("writing"):
             store.write_state(moved)
+            for box, state in zip(beside, finer, strict=True):
+                box.write_arrays(state)
             record.values["stencil_cleaning"] = store.stencil_cleaning
         with progress.stage("measuring"):
             stored = store.read_state(moved)
             record.field("stored", stored.flux)
             measure_stencil(record, loaded, stored.grid, store.read_cells())
+            measure_boxes(loaded, record, stored, [b.read_state(s) for b, s in zip(beside, finer, strict=True)])
             _compare(work, source, stored, plan, steps)
             record.finish(progress)
         store.write_report(to_json(record.values))
@@ -293,7 +335,7 @@ def _compare(work: Work, source: State, stored: State, plan: FluidPlan, steps: d
     record.energies(energies)
     record.values["profile"] = profile(stored.grid, {step: np.where(whole, e, 0.0) for step, e in cells.items()})
     measure_more(record, work.loaded, {"source": source, "stored": stored}, work.surfaces)
-    measure_gas(record, source, stored, plan)
+    measure_kept(record, source, stored, plan)
     if regions := region_masks(stored.grid, work.loaded.job.regions, cell_values(stored, cells["stored"] / volumes)):
         figures = Cells(relative_divergence(stored.flux), cells["stored"], cells["source"], whole, volumes)
         record.values["regions"] = {name: region_figures(figures, mask) for name, mask in regions.items()}

@@ -9,9 +9,9 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from fieldmover.diagnostics.limits import check_limits, flattened
+from fieldmover.diagnostics.limits import Verdict, check_limits, flattened
 from fieldmover.errors import JobError
-from fieldmover.jobs.schema import Within
+from fieldmover.jobs.schema.measures import AtLeast, Within
 
 SMALL = ("divergence", "change", "net", "relative", "linf", "l1", "l2", "net_flux", "north", "error")
 """Ends of names of figures that should vanish: their limits are absolute,"""
@@ -65,7 +65,7 @@ def read_report(path: Path) -> dict[str, Any]:
 
 
 def verdicts(
-    found: Mapping[str, float | None], limits: Mapping[str, float | Within], folder: Path
+    found: Mapping[str, float | None], limits: Mapping[str, float | Within | AtLeast], folder: Path
 ) -> list[dict[str, Any]]:
     """Each limit with what was found.
 
@@ -74,7 +74,7 @@ def verdicts(
     found : mapping
         Every figure the job knows, None where it was not measured: such a figure fails.
     limits : mapping
-        By name: the largest magnitude, or `Within`.
+        By name: the largest magnitude, `Within` or `AtLeast`.
     folder : Path
         That reports to compare with are named relative to.
 
@@ -82,7 +82,7 @@ def verdicts(
     -------
     list of dict
         "name", "found" (a relative change for `Within`), "limit", "passed", "value" (the figure itself),
-        "reference" (None, or the report and its value).
+        "reference" (None, or the report and its value), "least" (whether it is a limit from below).
 
     Raises
     ------
@@ -92,6 +92,11 @@ def verdicts(
     out = []
     for name, limit in limits.items():
         value = found[name]
+        if isinstance(limit, AtLeast):
+            passed = value is not None and value >= limit.at_least
+            verdict = Verdict(name, value, limit.at_least, passed)
+            out.append({**vars(verdict), "value": value, "reference": None, "least": True})
+            continue
         if isinstance(limit, Within):
             before = _before(folder / limit.of, name)
             reference = {"report": limit.of, "value": before}
@@ -99,7 +104,7 @@ def verdicts(
         else:
             reference, measured, most = None, value, limit
         (verdict,) = check_limits({name: measured}, {name: most})
-        out.append({**vars(verdict), "value": value, "reference": reference})
+        out.append({**vars(verdict), "value": value, "reference": reference, "least": False})
     return out
 
 

@@ -31,10 +31,11 @@ def compiling_fluid() -> Iterator[subprocess.Popen[bytes] | None]:
 
 
 def _compile() -> None:
-    """Use every kernel of the fluid once, on small grids of the kinds a hand-over has."""
+    """Use every kernel of the fluid and of measuring once, on small grids of the kinds a hand-over has."""
     import numpy as np
 
     import fieldmover as fm
+    from fieldmover.diagnostics import FluxSpline
     from fieldmover.interpolation.fluid import FluidPlan
 
     sphere = fm.spherical_grid(np.geomspace(1, 3, 9), np.linspace(0, np.pi, 9), np.linspace(0, 2 * np.pi, 17))
@@ -42,7 +43,9 @@ def _compile() -> None:
     box = fm.cartesian_grid(x, x, x)
     mass = fm.CellContent(sphere, sphere.cell_volumes())
     FluidPlan(sphere, box).move_by_mass(mass, np.ones((1, *sphere.shape)))
-    fm.diagnose(fm.flux_from_function(box, lambda x, y, z: (y, z, x)))
+    flux = fm.flux_from_function(box, lambda x, y, z: (y, z, x))
+    fm.diagnose(flux)
+    FluxSpline(flux).at(box.centres().reshape(3, -1))
 
 
 if __name__ == "__main__":

@@ -168,10 +168,21 @@ class SourceGrid(AnyGrid):
         return self
 
 
+class FinerBox(Table):
+    """A box of finer cells within the grid."""
+
+    level: int = Field(default=1, ge=1, le=30)
+    nodes: Annotated[list[Annotated[Rule | Positions, Discriminator(_sort_of_axis)]], Three] = Field(
+        description="three lists or rules, one for each axis"
+    )
+    group: Dataset = Field(description="the group of the output that the arrays of this box go to")
+
+
 class TargetGrid(AnyGrid):
-    """Positions from the job, or from a file of the receiving code."""
+    """Positions from the job, or from a file of the receiving code; boxes of finer cells within it."""
 
     file: Text | None = None
+    finer: list[FinerBox] = []
 
     @model_validator(mode="after")
     def _one(self) -> TargetGrid:
@@ -183,4 +194,12 @@ class TargetGrid(AnyGrid):
                 if self.file is not None
                 else f"{self.datasets[0]!r} is a dataset; give file, the HDF5 file it lies in, or numbers instead"
             )
+        if self.finer and self.kind != "cartesian":
+            raise ValueError(f"finer boxes lie in a cartesian grid, not in a {self.kind} one")
+        if self.finer and self.periodic is not None and any(self.periodic):
+            raise ValueError("finer boxes lie in a grid without seams; leave out periodic")
+        groups = ["/".join(part for part in box.group.split("/") if part) for box in self.finer]
+        for name in groups:
+            if groups.count(name) > 1 or not name or name.split("/")[0] == "fieldmover":
+                raise ValueError(f"group {name!r}: expected another one for each box, not /fieldmover")
         return self

@@ -41,6 +41,7 @@ class Target(Table):
 
     file: Text = Field(description="the file to write")
     axes: AxisOrder = "q1 q2 q3"
+    ghosts: Annotated[list[Annotated[int, Field(ge=0, le=100)]], Three] = [0, 0, 0]
     precision: Literal["double", "single"] = "double"
     view: bool = False
     grid: TargetGrid | None = None
@@ -63,7 +64,10 @@ class Move(Table):
     order: Literal[1, 3, 5, "limited"] = 3
     clean: Literal["when needed", "always", "never"] = "when needed"
     outside: Literal["least energy", "zero", "refuse"] = "least energy"
+    net_flux: Literal["refuse", "point"] = "refuse"
+    point: Annotated[list[Number], Three] = [0.0, 0.0, 0.0]
     perturb: Perturb | None = None
+    blend: Annotated[Number, Field(ge=0)] = 0.0
     keep: Literal["angular momentum"] | None = None
     axis: Axis = Axis()
 

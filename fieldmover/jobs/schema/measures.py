@@ -17,16 +17,18 @@ from fieldmover.jobs.schema.tables import Mistake, Number, Table, Text, Three, i
 
 
 def _sort_of_limit(value: Any) -> str:
+    if isinstance(value, AtLeast) or (isinstance(value, dict) and "at_least" in value):
+        return "lower"
     return "relative" if isinstance(value, dict | Within) else "absolute"
 
 
 def _dotted(value: Any, prefix: str = "") -> Any:
-    """Nested tables of limits as one with dotted names; a table that says `within` is a limit itself."""
+    """Nested tables of limits as one with dotted names; a table that says `within` or `at_least` is a limit itself."""
     if not isinstance(value, dict):
         return value
     flat: dict[str, Any] = {}
     for key, entry in value.items():
-        group = isinstance(entry, dict) and not entry.keys() & {"within", "of"}
+        group = isinstance(entry, dict) and not entry.keys() & {"within", "of", "at_least"}
         flat.update(_dotted(entry, f"{prefix}{key}.") if group else {f"{prefix}{key}": entry})
     return flat
 
@@ -51,8 +53,16 @@ class Within(Table):
     of: Text = Field(description="the report.json to compare with")
 
 
+class AtLeast(Table):
+    """A limit from below: `{ at_least = 0.99 }`."""
+
+    at_least: Number = Field(description="the smallest value allowed")
+
+
 Limit = Annotated[
-    Annotated[Number, Field(ge=0), Tag("absolute")] | Annotated[Within, Tag("relative")],
+    Annotated[Number, Field(ge=0), Tag("absolute")]
+    | Annotated[Within, Tag("relative")]
+    | Annotated[AtLeast, Tag("lower")],
     Discriminator(_sort_of_limit),
 ]
 Limits = Annotated[dict[Annotated[str, AfterValidator(_figure)], Limit], BeforeValidator(_dotted)]

@@ -36,6 +36,7 @@ def mistakes(job: Job) -> list[Mistake]:
         *_wanted(job),
         *_formulas(job),
         *_spaces(job),
+        *_beyond(job),
         *_names(job),
         *_regions(job),
         *region_mistakes(job.regions, job.scalars),
@@ -180,6 +181,33 @@ def _spaces(job: Job) -> list[Mistake]:
     if job.metric is None and any(own) and not all(own):
         side = "target" if own[0] else "source"
         found.append(((side,), f"one side has a metric; give {side}.metric too, or [metric] for both"))
+    return found
+
+
+def _beyond(job: Job) -> list[Mistake]:
+    """Ghost layers and finer boxes, and what does not go with them."""
+    found: list[Mistake] = []
+    target = job.target
+    finer = [] if target.grid is None else target.grid.finer
+    layers = any(target.ghosts)
+    for key, there in (("ghosts", layers), ("grid.finer", bool(finer))):
+        place = ("target", *key.split("."))
+        if there and target.potential is not None:
+            found.append((place, "does not go with target.potential"))
+        if there and target.magnetic.stencil != "faces":
+            found.append((place, "does not go with another stencil than that of the faces"))
+        if there and target.metric is not None:
+            found.append((place, "does not go with a metric from arrays"))
+        if there and job.health is not None and job.health.cure == "apply":
+            found.append((place, 'does not go with health.cure = "apply"'))
+    if layers and finer:
+        found.append((("target", "ghosts"), "finer boxes have none; leave one of both out"))
+    if layers and target.grid is None:
+        found.append((("target", "ghosts"), "clean keeps the grid of the source, without ghosts"))
+    if finer and job.move.keep is not None:
+        found.append((("move", "keep"), "does not go with finer boxes"))
+    if finer and (target.view or any(box.group.startswith("/VTKHDF") for box in finer)):
+        found.append((("target", "view"), "is for a grid without finer boxes"))
     return found
 
 

@@ -14,7 +14,7 @@ AxisOrder = Literal["q1 q2 q3", "q1 q3 q2", "q2 q1 q3", "q2 q3 q1", "q3 q1 q2", 
 
 Mistake = tuple[tuple[str, ...], str]
 
-TAGS = {"rule", "list", "dataset", "scalar", "vector", "absolute", "relative", "[key]"}
+TAGS = {"rule", "list", "dataset", "scalar", "vector", "absolute", "relative", "lower", "[key]"}
 """Names of alternatives, which validation puts into places and messages leave out."""
 UNITS = ("gaussian", "heaviside-lorentz")
 
