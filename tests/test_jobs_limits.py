@@ -75,7 +75,7 @@ def test_limits_against_a_report_made_before(check):
     (limit,) = report["limits"]
     assert limit["found"] == 0
     assert limit["reference"] == {"report": "good/report.json", "value": limit["value"]}
-    assert "within 1.000e-12 of" in said
+    assert "within 1e-12 of" in said
 
 
 def test_a_change_against_a_report(tmp_path):

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from fieldmover import compute
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, Three
-from fieldmover.forms.measures import face_factors
+from fieldmover.forms.measures import face_factors, near_volumes
 from fieldmover.grids.axes import dual_lengths
 from fieldmover.grids.grid import Grid, volume_factors
 
@@ -18,7 +18,7 @@ Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
 
 SLAB = 1 << 15  # cells worked on at a time
-FEWEST_ROWS = 8  # of grids whose nodes must be mapped
+FEWEST_ROWS = 2  # of grids whose nodes must be mapped; more would leave the cache
 
 
 def mean_field(flux: FaceFlux, rows: slice = slice(None)) -> tuple[Array, Array]:
@@ -67,6 +67,12 @@ def cell_slabs(grid: Grid) -> list[slice]:
     if volume_factors(grid) is None:  # nodes between slabs are mapped twice
         rows = max(rows, FEWEST_ROWS)
     return compute.slabs(n1, rows)
+
+
+def cell_volumes(grid: Grid) -> Array:
+    """Volumes of all cells as `forms.measures.near_volumes` has them, without the memory it takes at once."""
+    parts = compute.for_each(lambda rows: near_volumes(grid, rows), cell_slabs(grid))
+    return np.concatenate(parts)
 
 
 @dataclass(frozen=True, eq=False)

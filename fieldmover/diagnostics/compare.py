@@ -10,12 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
-from fieldmover.diagnostics.cells import cell_slabs, mean_field, same_place
+from fieldmover.diagnostics.cells import Mask, cell_slabs, cell_volumes, checked_mask, mean_field, same_place
 from fieldmover.diagnostics.limits import flattened
 from fieldmover.diagnostics.samples import FluxSpline
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux
-from fieldmover.forms.measures import near_volumes
 from fieldmover.grids.axes import centres_of
 from fieldmover.interpolation.locate import Locator, inside
 
@@ -69,7 +68,8 @@ class FieldComparison:
     points : int
         Cell centres compared.
     overlap : float
-        Part of the volume of the second field's grid that the first one's reaches, by the centres of its cells.
+        Part of the volume of the second field's grid that was compared: cells whose centre lies in the other one. Where
+        not all cells are looked at, as those tell.
     """
 
     figures: VectorFigures
@@ -171,7 +171,9 @@ def compare_fluxes(reference: FaceFlux, field: FaceFlux) -> VectorFigures:
     return sums.figures()
 
 
-def compare_fields(reference: FaceFlux, field: FaceFlux, most: int | None = None) -> FieldComparison:
+def compare_fields(
+    reference: FaceFlux, field: FaceFlux, where: Mask | None = None, most: int | None = None
+) -> FieldComparison:
     """Figures of a field against a reference on any other grid, where the two overlap.
 
     Both fields are evaluated, by cubic splines of their fluxes, at the cell centres of `field` that lie in the grid of
@@ -181,8 +183,10 @@ def compare_fields(reference: FaceFlux, field: FaceFlux, most: int | None = None
     ----------
     reference, field : FaceFlux
         In one Cartesian frame.
+    where : bool ndarray, shape (n1, n2, n3), optional
+        Cells of `field` to compare; all by default. Splines ring beside jumps: leave out what lies beside a fill.
     most : int, optional
-        Where more cells than this overlap, compare about so many of them, evenly spread; all by default.
+        Where there are more cells than this, look at so many of them, evenly spread; at all by default.
 
     Returns
     -------
@@ -192,7 +196,7 @@ def compare_fields(reference: FaceFlux, field: FaceFlux, most: int | None = None
     Raises
     ------
     FieldError
-        If the grids do not overlap.
+        If the mask does not fit, or nothing is left to compare.
 
     Examples
     --------
@@ -206,29 +210,35 @@ def compare_fields(reference: FaceFlux, field: FaceFlux, most: int | None = None
     (True, 0.46)
     """
     grid = field.grid
-    locator = Locator(reference.grid)
-    middles = [centres_of(nodes) for nodes in grid.nodes]
+    wanted = np.ones(grid.shape, dtype=np.bool_) if where is None else checked_mask(grid, where, "where")
+    cells = np.flatnonzero(wanted)
+    volumes = cell_volumes(grid).ravel()
+    share = float(volumes[cells].sum() / volumes.sum())
+    if most is not None and cells.size > most:
+        cells = cells[np.linspace(0, cells.size - 1, most).astype(np.int64)]
+    volumes = volumes[cells]
+    middles, locator = [centres_of(nodes) for nodes in grid.nodes], Locator(reference.grid)
 
-    def work(rows: slice) -> tuple[Array, Array, float]:
-        x = np.stack(grid.map.to_cartesian(middles[0][rows, None, None], middles[1][:, None], middles[2])).reshape(
-            3, -1
+    def locate(part: slice) -> tuple[Array, NDArray[np.bool_]]:
+        places = np.unravel_index(cells[part], grid.shape)
+        x = np.stack(grid.map.to_cartesian(*(q[i] for q, i in zip(middles, places, strict=True))))
+        return x, inside(reference.grid, locator.coordinates(x))
+
+    parts = compute.slabs(cells.size, _POINTS)
+    located = compute.for_each(locate, parts)
+    points = sum(int(within.sum()) for _, within in located)
+    if points == 0:
+        which = "" if where is None else "that is wanted "
+        raise FieldError(
+            f"fields to compare: {grid!r} has no cell centre {which}in {reference.grid!r}, expected an overlap"
         )
-        within, volumes = inside(reference.grid, locator.coordinates(x)), near_volumes(grid, rows).ravel()
-        return x[:, within], volumes[within], float(volumes.sum())
-
-    parts = compute.for_each(work, cell_slabs(grid))
-    x, volumes = (np.concatenate([part[n] for part in parts], axis=-1) for n in range(2))
-    if volumes.size == 0:
-        raise FieldError(f"fields to compare: {grid!r} has no cell centre in {reference.grid!r}, expected an overlap")
-    overlap = float(volumes.sum()) / sum(part[2] for part in parts)
-    if most is not None and volumes.size > most:
-        some = np.linspace(0, volumes.size - 1, most).astype(np.int64)
-        x, volumes = x[:, some], volumes[some]
-    sums = _Sums()
+    sums, reached = _Sums(), 0.0
     first, second = FluxSpline(reference), FluxSpline(field)
-    for part in compute.slabs(volumes.size, _POINTS):
-        sums.add(first.at(x[:, part]), second.at(x[:, part]), volumes[part])
-    return FieldComparison(sums.figures(), volumes.size, overlap)
+    for part, (x, within) in zip(parts, located, strict=True):
+        weights = volumes[part][within]
+        sums.add(first.at(x[:, within]), second.at(x[:, within]), weights)
+        reached += float(weights.sum())
+    return FieldComparison(sums.figures(), points, share * reached / float(volumes.sum()))
 
 
 def differences(before: Mapping[str, Any], after: Mapping[str, Any]) -> dict[str, Difference]:

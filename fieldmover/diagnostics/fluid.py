@@ -8,12 +8,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.diagnostics.cells import Mask, checked_mask
+from fieldmover.diagnostics.cells import Mask, cell_volumes, checked_mask
 from fieldmover.diagnostics.divergence import Index, centre_at, unravelled
 from fieldmover.diagnostics.energy import cell_energies
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import CellContent, FaceFlux
-from fieldmover.forms.measures import near_volumes
 from fieldmover.grids.grid import Grid
 
 Array = NDArray[np.float64]
@@ -120,7 +119,7 @@ def squares(flux: FaceFlux) -> Array:
     >>> squares(fm.flux_from_function(grid, lambda x, y, z: (0 * x, 0 * y, 2 + 0 * z))).ravel().round(12)
     array([4., 4.])
     """
-    return np.asarray(2.0 * cell_energies(flux) / near_volumes(flux.grid, slice(0, flux.grid.shape[0])))
+    return np.asarray(2.0 * cell_energies(flux) / cell_volumes(flux.grid))
 
 
 def fluid_extremes(

@@ -27,7 +27,7 @@ class Verdict:
         None where the figure is undefined or not finite.
     limit : float
     passed : bool
-        Whether |found| <= limit; False without a number.
+        Whether |found| <= limit (a job's `at_least`: found >= limit); False without a number.
     """
 
     name: str
