@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib.util
 import json
 import re
 import shutil
@@ -46,8 +47,9 @@ def test_the_list_names_every_example():
         "hand-over",
         "finer-grid",
         "gate",
+        "large-target",
     ]
-    assert set(FOLDERS) == {"hand-over", "finer-grid", "gate"}
+    assert set(FOLDERS) == {"hand-over", "finer-grid", "gate", "large-target"}
     assert (EXAMPLES / "ring.toml").read_text() == job_text()
 
 
@@ -126,3 +128,13 @@ def test_gate(there, monkeypatch):
         file["Bz"][12, 12, 16] *= 1.001
     assert main(commands[1].split()) == 3
     assert "limits exceeded: divergence" in (folder / "steps.md").read_text().replace("\\", "")
+
+
+def test_large_target(tmp_path):
+    spec = importlib.util.spec_from_file_location("large_target", EXAMPLES / "large-target" / "run.py")
+    example = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(example)
+    assert example.main(20, tmp_path / "box.h5") < 1e-15
+    with h5py.File(tmp_path / "box.h5") as file:
+        assert file["flux1"].shape == (21, 20, 20)
+        assert file["flux2"][:].any()

@@ -8,11 +8,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+import skfem
 
 import fieldmover as fm
 from fieldmover.forms.incidence import d1
-
-skfem = pytest.importorskip("skfem")
 
 SHAPE = (4, 3, 5)
 
