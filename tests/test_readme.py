@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import tomllib
 from pathlib import Path
 
 import h5py
@@ -11,6 +12,7 @@ import pytest
 
 from fieldmover import errors
 from fieldmover.cli import main
+from fieldmover.jobs.load import _table_at
 
 ROOT = Path(__file__).resolve().parent.parent
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -64,6 +66,32 @@ def test_the_job_runs_and_passes_its_limits(tmp_path):
         assert file["/Bx"].shape == (33, 32, 32)
         assert file["/density"][()].min() > 0
     assert main(["check", str(job), "--quiet"]) == 0
+
+
+def test_every_key_that_is_shown_is_known():
+    """The indented parts of job files, against the models that read them."""
+    shown = 0
+    for part in re.findall(r"(?:^    (?:\[|#|\w).*\n|^\n(?=    [\[\w#]))+", README, flags=re.MULTILINE):
+        text = "\n".join(line[4:] for line in part.splitlines() if not line.startswith("    fieldmover "))
+        if not re.search(r"^\[", text, flags=re.MULTILINE):
+            continue
+        for place, table in tables(tomllib.loads(text), ()):
+            model = _table_at(place)
+            known = {field.alias or name for name, field in model.model_fields.items()}
+            free = place[-1:] in (("regions",), ("surfaces",), ("limits",), ("fluid",)) or place[-2:-1] == ("units",)
+            free = free or "limits" in place or place[-1] in ("parameters", "rates", "walls") or place == ("units",)
+            assert free or set(table) <= known, (place, set(table) - known)
+            shown += len(table)
+    assert shown > 60
+
+
+def tables(values, place):
+    """All tables of a TOML text with their places; regions and the like lead to the model of their entries."""
+    for key, value in values.items():
+        for table in value if isinstance(value, list) else [value]:
+            if isinstance(table, dict):
+                yield (*place, key), table
+                yield from tables(table, (*place, key))
 
 
 def test_links_lead_somewhere():

@@ -115,7 +115,8 @@ def _hole(loaded: Loaded, to_move: bool) -> str:
 def _arguments(loaded: Loaded, flux: FaceFlux, to_move: bool) -> tuple[dict[str, Any], dict[str, NDArray[np.bool_]]]:
     """What `project` and `relax` are to keep, and the regions in which changes are counted."""
     job, grid = loaded.job, flux.grid
-    masks = region_masks(grid, {name: job.regions[name] for name in job.clean.regions})
+    values = {"B": np.sqrt(2.0 * cell_energies(flux) / grid.cell_volumes())}
+    masks = region_masks(grid, {name: job.regions[name] for name in job.clean.regions}, values)
     how: dict[str, Any] = {"walls": job.clean.walls, "hole": _hole(loaded, to_move)}
     if job.clean.weights is not None:
         formula = Expression(job.clean.weights, ["B"])
@@ -126,7 +127,7 @@ def _arguments(loaded: Loaded, flux: FaceFlux, to_move: bool) -> tuple[dict[str,
         how["excised"] = masks[job.clean.excised]
     for name, region in job.regions.items():
         with suppress(JobError):  # a region of the target may lie outside the source
-            masks.update(region_masks(grid, {name: region}))
+            masks.update(region_masks(grid, {name: region}, values))
     return how, masks
 
 
