@@ -23,6 +23,8 @@ from fieldmover.errors import NotConverged
 from fieldmover.jobs.demo import Ring, job_text, write_demo, write_snapshot
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 CELLS = (24, 16, 32)
 JOB = re.sub(r"cells = 128", "cells = 16", job_text()).replace("energy_change = 0.02", "energy_change = 0.2")
 
@@ -89,7 +91,7 @@ def place(tmp_path, small_snapshot):
 # -- what works ---------------------------------------------------------------------------------------------
 
 
-def test_a_hand_over(place, capsys):
+def test_a_hand_over(place, capsys, pictures):
     source = place.source.read_bytes()
     assert place.run() == 0
     shown = capsys.readouterr().out

@@ -23,6 +23,8 @@ from fieldmover.jobs.space import Space
 from fieldmover.jobs.verdicts import figures_of
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 JOB = job_text().replace("cells = 128", "cells = 16")
 JOB = JOB[: JOB.index("[limits]")]
 MORE = """

@@ -13,6 +13,8 @@ from fieldmover.conventions.components import faces_from_flux
 from fieldmover.interpolation.charge import point_charge_flux
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 BALL = fm.spherical_grid(np.linspace(0.2, 2, 19), np.linspace(0, np.pi, 13), np.linspace(0, 2 * np.pi, 25))
 
 

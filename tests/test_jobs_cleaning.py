@@ -13,6 +13,8 @@ from fieldmover.conventions.components import faces_from_flux
 from fieldmover.grids.grid import at as at_axis
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 N = 12
 AXIS = f"{{ from = -1, to = 1, cells = {N} }}"
 BOX = f"[{AXIS}, {AXIS}, {AXIS}]"

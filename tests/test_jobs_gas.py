@@ -11,6 +11,8 @@ import pytest
 import fieldmover as fm
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 BOX = "[{ from = -1, to = 1, cells = 8 }, { from = -1, to = 1, cells = 8 }, { from = -1, to = 1, cells = 8 }]"
 SMALL = BOX.replace("-1", "-0.5").replace("to = 1", "to = 0.5").replace("cells = 8", "cells = 5")
 CELLS = (8, 8, 8)

@@ -12,9 +12,12 @@ from fieldmover.grids.placement import turn_about
 from fieldmover.grids.warps import crowded_grid
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 TURNS = np.linspace(0, 2 * np.pi, 17)
 WARP = """\
 import numpy as np
+
 
 def wavy(a, b, c, phase, size=0.05):
     return a + size * np.sin(2 * b + phase), b + size * np.cos(a), c + 0 * a

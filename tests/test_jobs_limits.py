@@ -17,6 +17,8 @@ from fieldmover.jobs.schema import Within
 from fieldmover.jobs.verdicts import limits_table, verdicts
 from fieldmover.jobs.worker import Options, work
 
+pytestmark = pytest.mark.usefixtures("no_pictures")
+
 JOB = job_text().replace("cells = 128", "cells = 16")
 JOB = JOB[: JOB.index("[limits]")]
 
@@ -136,7 +138,7 @@ def test_what_is_refused(check, moved, table, words):
     assert report is None
 
 
-def test_planes_of_the_report(check):
+def test_planes_of_the_report(check, pictures):
     _, _, report = check('[report]\nplanes = ["x = 1", "z = -2.5"]\n')
     assert [picture["plane"] for picture in report["pictures"]] == ["x = 1"] * 5 + ["z = -2.5"] * 5
 
