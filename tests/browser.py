@@ -44,6 +44,12 @@ def missing() -> str | None:
         return "websockets is not installed"
     if _binary() is None and (find_spec("PyQt6") is None or find_spec("PyQt6.QtWebEngineWidgets") is None):
         return f"no browser: no FIELDMOVER_BROWSER, none of {', '.join(NAMES)} on the PATH, no PyQt6-WebEngine"
+    if _binary() is None:
+        tried = subprocess.run(
+            [sys.executable, "-c", "import PyQt6.QtWebEngineWidgets"], capture_output=True, text=True, check=False
+        )
+        if tried.returncode:
+            return f"PyQt6-WebEngine lacks something of the system: {tried.stderr.strip().splitlines()[-1:]}"
     return None
 
 
