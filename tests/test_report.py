@@ -66,7 +66,7 @@ def report(folder):
 def test_the_names_are_those_that_are_measured(report):
     names, measured = known(["density"], ["ring", "core", "box"]), figures_of(report)
     assert set(measured) <= set(names)
-    asked_for = ("against.", "helicity.")  # by the command line, and by the job
+    asked_for = ("against.", "helicity.", "curved.")  # by the command line, and by the job
     assert {name for name in names if not name.startswith(asked_for)} == set(measured)
     grid = cartesian_grid([0, 1], [0, 1], [0, 1])
     zero = FaceFlux(grid, (np.zeros((2, 1, 1)), np.zeros((1, 2, 1)), np.zeros((1, 1, 2))))

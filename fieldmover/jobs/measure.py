@@ -18,6 +18,7 @@ from fieldmover.interpolation.fluid import FluidPlan
 from fieldmover.jobs.details import helicity_figures
 from fieldmover.jobs.gas import extreme_figures, gas_figures, gas_sums
 from fieldmover.jobs.grids import target_grid
+from fieldmover.jobs.health import field_of
 from fieldmover.jobs.load import Loaded, load
 from fieldmover.jobs.names import STRENGTH
 from fieldmover.jobs.read import State, read_target, target_space
@@ -50,6 +51,10 @@ def measure_more(record: Record, loaded: Loaded, states: Mapping[str, State], su
     values["surfaces_meant"] = {name: str(surface) for name, surface in surfaces.items()}
     for step, state in states.items():
         values["extremes"][step], values["extremes_at"][step] = extreme_figures(state)
+        if state.space.geometry is not None:
+            field = field_of(state)
+            square = state.space.geometry.dot(field, field)
+            values["curved"][step] = {"energy": float(0.5 * (square * state.space.volumes).sum())}
         if loaded.job.report.helicity:
             found = helicity_figures(state.flux)
             values["helicity_missing" if isinstance(found, str) else "helicity"][step] = found

@@ -57,6 +57,9 @@ GAS = tuple(
     f"{sum_}.{part}" if part else sum_ for sum_ in SUMS for part in (("x", "y", "z") if "momentum" in sum_ else ("",))
 )
 
+CURVED = ("energy",)
+"""In a metric: half of gamma_ij B^i B^j over proper volumes, of the whole grid."""
+
 EXTREMES = ("b2_over_rho_largest", "beta_smallest", "beta_largest", "speed_largest", "lorentz_largest")
 """Of the gas and the field."""
 
@@ -87,6 +90,7 @@ def known(conserved: Iterable[str] = (), regions: Iterable[str] = (), surfaces: 
         *(f"against.{figure}" for figure in AGAINST),
         *(f"{step}.{figure}" for step in STEPS for figure in FIELD),
         *(f"helicity.{step}.{figure}" for step in MEASURED for figure in HELICITY),
+        *(f"curved.{step}.{figure}" for step in MEASURED for figure in CURVED),
         *(f"gas.{when}.{figure}" for when in ("before", "stored") for figure in GAS),
         *(f"gas.change.{figure}" for figure in SUMS),
         *(f"extremes.{step}.{figure}" for step in MEASURED for figure in EXTREMES),

@@ -62,6 +62,7 @@ class Record:
             "surfaces_meant": {},
             "stencil": None,
             "helicity": {},
+            "curved": {},
             "helicity_missing": {},
             "gas": {},
             "extremes": {},

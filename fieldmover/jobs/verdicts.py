@@ -24,7 +24,7 @@ ROUND_OFF = 1e-14
 """Of relative figures; a limit below it would fail on another machine."""
 
 
-GROUPS = ("stencil", "surfaces", "helicity", "gas", "extremes", "agreement")
+GROUPS = ("stencil", "surfaces", "helicity", "gas", "extremes", "agreement", "curved")
 """Of a report; in those of earlier versions they are missing."""
 
 

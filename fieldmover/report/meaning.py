@@ -108,7 +108,9 @@ TOTAL = {
 }
 
 
-GROUPS = {"regions": REGION, "surfaces": SURFACE, "helicity": HELICITY, "extremes": EXTREME}
+CURVED = {"energy": "Half of gamma_ij B^i B^j over the proper volumes of all cells: the magnetic energy in the metric."}
+
+GROUPS = {"curved": CURVED, "regions": REGION, "surfaces": SURFACE, "helicity": HELICITY, "extremes": EXTREME}
 
 
 def meaning(name: str) -> str:

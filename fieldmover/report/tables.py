@@ -48,7 +48,7 @@ def kept(report: Mapping[str, Any]) -> list[Table]:
 
 def others(report: Mapping[str, Any]) -> list[Table]:
     """What else was measured."""
-    return _filled(report, surfaces, helicity, extremes, agreement, against, side_by_side)
+    return _filled(report, surfaces, curved, helicity, extremes, agreement, against, side_by_side)
 
 
 def _filled(report: Mapping[str, Any], *made: Callable[[Mapping[str, Any]], Table]) -> list[Table]:
@@ -175,6 +175,14 @@ def surfaces(report: Mapping[str, Any]) -> Table:
     heads = ("", "flux, source", "flux, stored", "change", "unsigned, source", "unsigned, stored", "surface")
     note = "Unsigned: the integral of |B.n|. Change: the difference of the fluxes over the unsigned flux of the source."
     return Table("Flux through surfaces", heads, rows, note)
+
+
+def curved(report: Mapping[str, Any]) -> Table:
+    """Magnetic energy in the metric of the job."""
+    found = report.get("curved") or {}
+    row = ("magnetic energy", *(short(figures["energy"]) for figures in found.values()))
+    note = "Half of gamma_ij B^i B^j over proper volumes of the whole grid."
+    return Table("In the metric", ("", *found), [row] if found else [], note)
 
 
 def helicity(report: Mapping[str, Any]) -> Table:
