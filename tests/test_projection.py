@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import tracemalloc
 
 import numpy as np
 import pytest
@@ -434,3 +435,40 @@ def test_a_field_that_is_nearly_clean_is_cleaned_to_its_own_rounding():
     clean, record = fm.project(fm.FaceFlux(grid, (a, b, c)))
     assert record.divergence_before.linf > 1e-13
     assert fm.diagnose(clean).divergence.linf < 1e-15
+
+
+@pytest.fixture
+def one_thread():
+    """Every thread has some planes in work."""
+    before = compute.threads()
+    compute.set_threads(1)
+    yield
+    compute.set_threads(before)
+
+
+@pytest.mark.usefixtures("one_thread")
+@pytest.mark.parametrize("given", ["nothing", "frozen", "weights"])
+def test_memory_is_eight_arrays_at_most(given):
+    """NumPy tells tracemalloc of every array, so this counts what is alive at once."""
+
+    def request(n):
+        flux = noise(bent(n))
+        if given == "weights":
+            return flux, {"weights": [np.full(f.shape, 2.0) for f in flux.faces]}
+        if given == "nothing":
+            return flux, {}
+        masks = [np.zeros(f.shape, dtype=bool) for f in flux.faces]
+        masks[0][n // 2, : n // 2] = True
+        return flux, {"frozen": masks}
+
+    small, arguments = request(4)
+    fm.project(small, **arguments)  # compiles
+    n = 96
+    flux, arguments = request(n)
+    tracemalloc.start()
+    try:
+        fm.project(flux, tolerance=1e-3, **arguments)
+        most = tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+    assert most <= 8 * flux.f1.itemsize * n**3

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 import fieldmover as fm
+from fieldmover.errors import FieldError
 from fieldmover.forms.incidence import d0
 from fieldmover.forms.measures import edge_factors
 from fieldmover.grids.grid import outer
@@ -136,3 +137,13 @@ def test_mean_field_of_other_grids_is_refused():
 def test_unknown_gauge():
     with pytest.raises(fm.errors.FieldError, match="gauge: 'coulomb', expected one of 'smooth', 'axial', 'none'"):
         fm.potential(noise(GRIDS["shell"]), gauge="coulomb")
+
+
+@pytest.mark.parametrize("axis", range(3))
+def test_what_is_not_finite_is_refused(axis):
+    faces = [
+        f.copy() for f in fm.curl(fm.potential_from_function(GRIDS["ring outward"], lambda x, y, z: (y, z, x))).faces
+    ]
+    faces[axis][1, 1, 1] = np.nan
+    with pytest.raises(FieldError, match="not finite"):
+        fm.potential(fm.FaceFlux(GRIDS["ring outward"], tuple(faces)))

@@ -7,10 +7,11 @@ neighbouring points share them.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from functools import cache
-
 import numpy as np
+from llvmlite import ir
+from numba import types
+from numba.core import cgutils
+from numba.extending import intrinsic
 from numpy.typing import NDArray
 
 from fieldmover import compute
@@ -40,13 +41,13 @@ class PotentialSpline:
             [spline.cells.take.size if axis == d else spline.values.take.size for d, spline in enumerate(splines)]
             for axis in range(3)
         ]
-        # The three components lie side by side, so that those of a point share cache lines.
-        coefficients = np.empty((*(max(sizes) for sizes in zip(*shapes, strict=True)), 3))
+        coefficients = np.empty((3, *(max(sizes) for sizes in zip(*shapes, strict=True))))
         for axis, (a, (m1, m2, m3)) in enumerate(zip(pot.edges, shapes, strict=True)):
-            fit_form(pot.grid, splines, a, (axis,), coefficients[:m1, :m2, :m3, axis])
+            fit_form(pot.grid, splines, a, (axis,), coefficients[axis, :m1, :m2, :m3])
         self._tables = tuple(_table(spline) for spline in splines)
         self._coefficients = coefficients.ravel()
-        self._strides = np.array(coefficients.strides[:2], dtype=np.uint64) // np.uint64(8)
+        self._strides = np.array(coefficients.strides[:3], dtype=np.int64) // coefficients.itemsize
+        self._sizes = (0.0,) * (order + 1), (0.0,) * cell_shape(order, sharp=True)[0]
 
     def covectors(self, q: Array) -> Array:
         """Components A_i of the potential at points.
@@ -62,7 +63,7 @@ class PotentialSpline:
             Per unit of grid coordinate; NaN where left out.
         """
         out = np.empty_like(q)
-        _kernels(self.order)[0](q, *self._tables, self._coefficients, self._strides, out)
+        _covectors(q, *self._tables, self._coefficients, self._strides, self._sizes, out)
         return out
 
     def straight(self, start: Array, end: Array) -> Array:
@@ -83,19 +84,100 @@ class PotentialSpline:
         """
         out = np.empty(start.shape[1])
         turns = [np.ptp(n) if seam else 0.0 for n, seam in zip(self.grid.nodes, self.grid.periodic, strict=True)]
-        _kernels(self.order)[1](start, end, np.array(turns), *self._tables, self._coefficients, self._strides, out)
+        _straight(start, end, np.array(turns), *self._tables, self._coefficients, self._strides, self._sizes, out)
         return out
 
 
 def _table(spline: AxisSpline) -> tuple:
-    """Arrays of one axis as the kernels take them: powers before basis functions."""
+    """Arrays of one axis as the kernels take them: powers, of both kinds as many, before basis functions."""
+    values, cells = (pieces.transpose(0, 2, 1) for pieces in (spline.value_pieces, spline.cell_pieces))
+    more = values.shape[1] - cells.shape[1]
     return (
         spline.nodes,
-        np.ascontiguousarray(spline.value_pieces.transpose(0, 2, 1)),
-        np.ascontiguousarray(spline.cell_pieces.transpose(0, 2, 1)),
-        spline.value_first.astype(np.uint64),
-        spline.cell_first.astype(np.uint64),
+        np.ascontiguousarray(values),
+        np.ascontiguousarray(np.pad(cells, ((0, 0), (0, more), (0, 0)))),
+        spline.value_first.astype(np.int64),
+        spline.cell_first.astype(np.int64),
     )
+
+
+_FLAGS = ("contract", "reassoc")
+
+
+@intrinsic
+def _polynomials(typing, pieces, cell, s, powers, functions):  # type: ignore[no-untyped-def]
+    """Sums of pieces[cell, power, m] s^power over the powers, a tuple of one for each m.
+
+    Only the lengths of the tuples `powers` and `functions` are used: they are part of the type, so the compiler knows
+    them. All m are one vector, and stay in registers.
+    """
+
+    def generate(context, builder, signature, arguments):  # type: ignore[no-untyped-def]
+        count = len(functions)
+        vector = ir.VectorType(ir.DoubleType(), count)
+        x = _everywhere(builder, vector, arguments[2])
+        place = builder.mul(arguments[1], ir.IntType(64)(len(powers) * count))
+        rows = _rows(builder, vector, _data(context, builder, pieces, arguments[0]), place, count, len(powers))
+        total = rows.pop()
+        while rows:
+            total = builder.fadd(builder.fmul(total, x, flags=_FLAGS), rows.pop(), flags=_FLAGS)
+        numbers = [builder.extract_element(total, ir.IntType(32)(m)) for m in range(count)]
+        return context.make_tuple(builder, signature.return_type, numbers)
+
+    return types.UniTuple(types.float64, len(functions))(pieces, cell, s, powers, functions), generate
+
+
+@intrinsic
+def _product_sum(typing, a, start, first, second, u, v, w):  # type: ignore[no-untyped-def]
+    """Sum of u[r] v[s] w[t] a[start + first r + second s + t] over all r, s and t, which tuples give the numbers of.
+
+    What has the same r and s is one vector.
+    """
+
+    def generate(context, builder, signature, arguments):  # type: ignore[no-untyped-def]
+        data, (place, first, second) = _data(context, builder, a, arguments[0]), arguments[1:4]
+        us, vs, ws = (cgutils.unpack_tuple(builder, values) for values in arguments[4:])
+        vector = ir.VectorType(ir.DoubleType(), len(ws))
+        vs = [_everywhere(builder, vector, factor) for factor in vs]
+        planes = []
+        for factor in us:
+            rows = _rows(builder, vector, data, place, second, len(vs))
+            planes.append((_everywhere(builder, vector, factor), _scalar_product(builder, vs, rows)))
+            place = builder.add(place, first)
+        total = _scalar_product(builder, *zip(*planes, strict=True))
+        return _scalar_product(builder, ws, [builder.extract_element(total, ir.IntType(32)(t)) for t in range(len(ws))])
+
+    return types.float64(a, start, first, second, u, v, w), generate
+
+
+def _data(context, builder, kind, array):  # type: ignore[no-untyped-def]
+    """Pointer to the first element of an array."""
+    return context.make_array(kind)(context, builder, array).data
+
+
+def _rows(builder, vector, data, place, step, count):  # type: ignore[no-untyped-def]
+    """Vectors of what lies side by side in memory, at some distance from each other."""
+    rows = []
+    step = ir.IntType(64)(step) if isinstance(step, int) else step
+    for _ in range(count):
+        rows.append(builder.load(builder.bitcast(builder.gep(data, [place]), vector.as_pointer()), align=8))
+        place = builder.add(place, step)
+    return rows
+
+
+def _everywhere(builder, vector, number):  # type: ignore[no-untyped-def]
+    """Vector with one number in all places."""
+    nothing, first = ir.Constant(vector, ir.Undefined), ir.IntType(32)(0)
+    places = ir.Constant(ir.VectorType(ir.IntType(32), vector.count), None)  # zeros
+    return builder.shuffle_vector(builder.insert_element(nothing, number, first), nothing, places)
+
+
+def _scalar_product(builder, factors, values):  # type: ignore[no-untyped-def]
+    total = None
+    for factor, value in zip(factors, values, strict=True):
+        product = builder.fmul(factor, value, flags=_FLAGS)
+        total = product if total is None else builder.fadd(total, product, flags=_FLAGS)
+    return total
 
 
 @compute.kernel
@@ -108,136 +190,98 @@ def hunt(value, nodes, cell):
     return cell
 
 
-@cache
-def _kernels(order: int) -> tuple[Callable, Callable]:
-    """The kernels for one order: with a constant number of basis functions the compiler unrolls its loops.
+@compute.fast_kernel
+def _basis(value, table, cell, sizes):
+    """Basis functions of values and of cells that do not vanish at a place along an axis."""
+    nodes, value_pieces, cell_pieces = table[0], table[1], table[2]
+    s = (value - nodes[cell]) / (nodes[cell + 1] - nodes[cell])
+    values, cells = sizes
+    return (
+        _polynomials(value_pieces, cell, s, values, values),  # type: ignore[call-arg]
+        _polynomials(cell_pieces, cell, s, values, cells),  # type: ignore[call-arg]
+    )
 
-    Indices into coefficients are unsigned, which spares the test for negative ones (a third of the time). The
-    kernels call `covector` at one place only, so that it is inlined.
-    """
-    width = order + 1
-    cells, powers = cell_shape(order, sharp=True)
 
-    @compute.fast_kernel
-    def basis(value, table, cell, b, c):
-        nodes, value_pieces, cell_pieces = table[0], table[1], table[2]
-        s = (value - nodes[cell]) / (nodes[cell + 1] - nodes[cell])
-        for m in range(width):
-            x = value_pieces[cell, width - 1, m]
-            for power in range(width - 2, -1, -1):
-                x = x * s + value_pieces[cell, power, m]
-            b[m] = x
-        for m in range(cells):
-            x = cell_pieces[cell, powers - 1, m]
-            for power in range(powers - 2, -1, -1):
-                x = x * s + cell_pieces[cell, power, m]
-            c[m] = x
+@compute.fast_kernel
+def _covector(q1, q2, q3, cell1, cell2, cell3, t1, t2, t3, a, strides, sizes):
+    (b1, c1), (b2, c2), (b3, c3) = (
+        _basis(q1, t1, cell1, sizes),
+        _basis(q2, t2, cell2, sizes),
+        _basis(q3, t3, cell3, sizes),
+    )
+    part, first, second = strides[0], strides[1], strides[2]
+    i, j, k = first * t1[3][cell1], second * t2[3][cell2], t3[3][cell3]
+    ic, jc, kc = first * t1[4][cell1], second * t2[4][cell2], t3[4][cell3]
+    return (
+        _product_sum(a, ic + j + k, first, second, c1, b2, b3),  # type: ignore[call-arg]
+        _product_sum(a, part + i + jc + k, first, second, b1, c2, b3),  # type: ignore[call-arg]
+        _product_sum(a, 2 * part + i + j + kc, first, second, b1, b2, c3),  # type: ignore[call-arg]
+    )
 
-    @compute.fast_kernel
-    def covector(q1, q2, q3, cell1, cell2, cell3, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3):
-        basis(q1, t1, cell1, b1, c1)
-        basis(q2, t2, cell2, b2, c2)
-        basis(q3, t3, cell3, b3, c3)
-        i, j, k = t1[3][cell1], t2[3][cell2], t3[3][cell3]
-        ic, jc, kc = t1[4][cell1], t2[4][cell2], t3[4][cell3]
-        first, second, third = strides[0], strides[1], np.uint64(3)
-        i, j, k = first * i, second * j, third * k
-        ic, jc, kc = first * ic, second * jc, third * kc
-        one, two, three = 0.0, 0.0, 0.0
-        for r in range(cells):
-            x = 0.0
-            for s in range(width):
-                at, line = ic + first * np.uint64(r) + j + second * np.uint64(s) + k, 0.0
-                for t in range(width):
-                    line += b3[t] * a[at + np.uint64(3 * t)]
-                x += b2[s] * line
-            one += c1[r] * x
-        for r in range(width):
-            row, y, z = i + first * np.uint64(r), 0.0, 0.0
-            for s in range(cells):
-                at, line = row + jc + second * np.uint64(s) + k + np.uint64(1), 0.0
-                for t in range(width):
-                    line += b3[t] * a[at + np.uint64(3 * t)]
-                y += c2[s] * line
-            for s in range(width):
-                at, line = row + j + second * np.uint64(s) + kc + np.uint64(2), 0.0
-                for t in range(cells):
-                    line += c3[t] * a[at + np.uint64(3 * t)]
-                z += b2[s] * line
-            two += b1[r] * y
-            three += b1[r] * z
-        return one, two, three
 
-    @compute.fast_kernel
-    def covectors(q, t1, t2, t3, a, strides, out):
-        b1, b2, b3 = np.empty(width), np.empty(width), np.empty(width)
-        c1, c2, c3 = np.empty(cells), np.empty(cells), np.empty(cells)
-        i, j, k = 0, 0, 0
-        for n in range(q.shape[1]):
-            if np.isnan(q[0, n]):
-                out[0, n], out[1, n], out[2, n] = np.nan, np.nan, np.nan
-                continue
-            i, j, k = hunt(q[0, n], t1[0], i), hunt(q[1, n], t2[0], j), hunt(q[2, n], t3[0], k)
-            out[0, n], out[1, n], out[2, n] = covector(
-                q[0, n], q[1, n], q[2, n], i, j, k, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3
-            )
+@compute.fast_kernel
+def _covectors(q, t1, t2, t3, a, strides, sizes, out):
+    i, j, k = 0, 0, 0
+    for n in range(q.shape[1]):
+        if np.isnan(q[0, n]):
+            out[0, n], out[1, n], out[2, n] = np.nan, np.nan, np.nan
+            continue
+        i, j, k = hunt(q[0, n], t1[0], i), hunt(q[1, n], t2[0], j), hunt(q[2, n], t3[0], k)
+        out[0, n], out[1, n], out[2, n] = _covector(q[0, n], q[1, n], q[2, n], i, j, k, t1, t2, t3, a, strides, sizes)
 
-    @compute.kernel
-    def crossing(start, change, nodes, cell, offset):
-        """Parameter at which a line leaves a cell; past the walls it never does."""
-        if change > 0.0 and (cell < nodes.size - 2 or offset[1] > 0.0):
-            return (nodes[cell + 1] + offset[0] - start) / change
-        if change < 0.0 and (cell > 0 or offset[1] > 0.0):
-            return (nodes[cell] + offset[0] - start) / change
-        return np.inf
 
-    @compute.kernel
-    def next_cell(change, nodes, cell, offset):
-        cell += 1 if change > 0.0 else -1
-        if cell > nodes.size - 2:
-            offset[0] += offset[1]
-            return 0
-        if cell < 0:
-            offset[0] -= offset[1]
-            return nodes.size - 2
-        return cell
+@compute.kernel
+def _crossing(start, change, nodes, cell, offset):
+    """Parameter at which a line leaves a cell; past the walls it never does."""
+    if change > 0.0 and (cell < nodes.size - 2 or offset[1] > 0.0):
+        return (nodes[cell + 1] + offset[0] - start) / change
+    if change < 0.0 and (cell > 0 or offset[1] > 0.0):
+        return (nodes[cell] + offset[0] - start) / change
+    return np.inf
 
-    @compute.kernel
-    def straight(start, end, turns, t1, t2, t3, a, strides, out):
-        b1, b2, b3 = np.empty(width), np.empty(width), np.empty(width)
-        c1, c2, c3 = np.empty(cells), np.empty(cells), np.empty(cells)
-        offset, change, at = np.empty((3, 2)), np.empty(3), np.empty(3)
-        i, j, k = 0, 0, 0
-        for n in range(out.size):
-            out[n] = np.nan
-            if np.isnan(start[0, n]):
-                continue
-            for d in range(3):
-                change[d] = end[d, n] - start[d, n]
-                offset[d, 0], offset[d, 1] = 0.0, turns[d]
-            i, j, k = hunt(start[0, n], t1[0], i), hunt(start[1, n], t2[0], j), hunt(start[2, n], t3[0], k)
-            total, here = 0.0, 0.0
-            while here < 1.0:
-                s1 = crossing(start[0, n], change[0], t1[0], i, offset[0])
-                s2 = crossing(start[1, n], change[1], t2[0], j, offset[1])
-                s3 = crossing(start[2, n], change[2], t3[0], k, offset[2])
-                there = max(here, min(s1, s2, s3, 1.0))
-                for side in range(2):  # two Gauss points: exact for the products of order 1
-                    s = here + (there - here) * (0.5 + (side - 0.5) * 0.5773502691896257645)
-                    for d in range(3):
-                        at[d] = start[d, n] + s * change[d] - offset[d, 0]
-                    one, two, three = covector(
-                        at[0], at[1], at[2], i, j, k, t1, t2, t3, a, strides, b1, b2, b3, c1, c2, c3
-                    )
-                    total += 0.5 * (there - here) * (one * change[0] + two * change[1] + three * change[2])
-                here = there
-                if here < 1.0:
-                    if s1 <= here:
-                        i = next_cell(change[0], t1[0], i, offset[0])
-                    if s2 <= here:
-                        j = next_cell(change[1], t2[0], j, offset[1])
-                    if s3 <= here:
-                        k = next_cell(change[2], t3[0], k, offset[2])
-            out[n] = total
 
-    return covectors, straight
+@compute.kernel
+def _next_cell(change, nodes, cell, offset):
+    cell += 1 if change > 0.0 else -1
+    if cell > nodes.size - 2:
+        offset[0] += offset[1]
+        return 0
+    if cell < 0:
+        offset[0] -= offset[1]
+        return nodes.size - 2
+    return cell
+
+
+@compute.kernel
+def _straight(start, end, turns, t1, t2, t3, a, strides, sizes, out):
+    offset, change, at = np.empty((3, 2)), np.empty(3), np.empty(3)
+    i, j, k = 0, 0, 0
+    for n in range(out.size):
+        out[n] = np.nan
+        if np.isnan(start[0, n]):
+            continue
+        for d in range(3):
+            change[d] = end[d, n] - start[d, n]
+            offset[d, 0], offset[d, 1] = 0.0, turns[d]
+        i, j, k = hunt(start[0, n], t1[0], i), hunt(start[1, n], t2[0], j), hunt(start[2, n], t3[0], k)
+        total, here = 0.0, 0.0
+        while here < 1.0:
+            s1 = _crossing(start[0, n], change[0], t1[0], i, offset[0])
+            s2 = _crossing(start[1, n], change[1], t2[0], j, offset[1])
+            s3 = _crossing(start[2, n], change[2], t3[0], k, offset[2])
+            there = max(here, min(s1, s2, s3, 1.0))
+            for side in range(2):  # two Gauss points: exact for the products of order 1
+                s = here + (there - here) * (0.5 + (side - 0.5) * 0.5773502691896257645)
+                for d in range(3):
+                    at[d] = start[d, n] + s * change[d] - offset[d, 0]
+                one, two, three = _covector(at[0], at[1], at[2], i, j, k, t1, t2, t3, a, strides, sizes)
+                total += 0.5 * (there - here) * (one * change[0] + two * change[1] + three * change[2])
+            here = there
+            if here < 1.0:
+                if s1 <= here:
+                    i = _next_cell(change[0], t1[0], i, offset[0])
+                if s2 <= here:
+                    j = _next_cell(change[1], t2[0], j, offset[1])
+                if s3 <= here:
+                    k = _next_cell(change[2], t3[0], k, offset[2])
+        out[n] = total

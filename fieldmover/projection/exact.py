@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from fieldmover import compute
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import Three
+from fieldmover.forms.measures import Products
 from fieldmover.grids.grid import at
 from fieldmover.projection.operator import ProjectionOperator
 
@@ -65,7 +66,7 @@ def close(
     faces: Three,
     operator: ProjectionOperator,
     forest: Forest,
-    frozen: tuple[Mask, Mask, Mask] | None = None,
+    frozen: bool = False,
     quantum: float | None = None,
 ) -> float:
     """Make the divergence of fluxes that is zero to round-off exactly zero, in place.
@@ -78,9 +79,9 @@ def close(
         Says where walls, seams and the hole are, whose net flux becomes exactly zero too.
     forest : Forest
         `lines` or `search`.
-    frozen : tuple of three bool ndarrays, optional
-        Faces that keep their bits. Unless they are multiples of the quantum, cells they touch keep the
-        rounding of one sum, and an island (see `Forest`) what its frozen faces do not balance, in one cell.
+    frozen : bool
+        Whether faces of conductance 0 keep their bits. Unless they are multiples of the quantum, cells they touch
+        keep the rounding of one sum, and an island (see `Forest`) what its frozen faces do not balance, in one cell.
     quantum : float, optional
         Power of two of which the result holds multiples; by default `quantum_of(faces)`.
 
@@ -102,7 +103,7 @@ def close(
     if quantum == 0:
         return quantum
     for axis in range(3):
-        _round(faces[axis], quantum, None if frozen is None else frozen[axis])
+        _round(faces[axis], quantum, operator.conductances[axis] if frozen else None)
     if operator.hole is not None:
         wall = faces[operator.hole][at(operator.hole, 0)]
         may_change = np.unravel_index(int(np.argmax(operator.hole_wall)), wall.shape)
@@ -111,12 +112,12 @@ def close(
     return quantum
 
 
-def _round(values: Array, quantum: float, frozen: Mask | None) -> None:
+def _round(values: Array, quantum: float, held_by: Array | Products | None) -> None:
     def work(rows: slice) -> None:
         part = values[rows] / quantum
         np.rint(part, out=part)
         part *= quantum
-        np.copyto(values[rows], part, where=True if frozen is None else ~frozen[rows])
+        np.copyto(values[rows], part, where=True if held_by is None else held_by[rows] > 0)
 
     compute.for_each(work, compute.slabs(values.shape[0], (1 << 16) // (values.shape[1] * values.shape[2])))
 

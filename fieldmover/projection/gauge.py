@@ -6,19 +6,16 @@ poles and seams: what is smooth there is smooth here, since the map from one to 
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
 import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.forms.fields import Three
 from fieldmover.forms.measures import Factors, edge_factors
-from fieldmover.grids.grid import Grid, at, cartesian_grid, outer, spherical_grid
+from fieldmover.grids.grid import Grid, at, cartesian_grid, spherical_grid
 from fieldmover.projection.separable import for_nodes
 
 Array = NDArray[np.float64]
-Weight = Callable[[int, slice], Array]
 
 _ROWS = 8  # planes per task
 _SAMPLES = 9  # lines per axis that tell how long another is
@@ -40,10 +37,15 @@ def smoothing_gauge(grid: Grid, edges: Three) -> Array:
         One value at each pole node; the last along a seam is the first.
     """
     unique = tuple(slice(None, -1) if seam else slice(None) for seam in grid.periodic)
-    g = np.empty(grid.node_shape())
     factors = edge_factors(grid) or _plain_factors(grid)
-    rhs = _divergence(grid, edges, lambda axis, rows: _part(factors[axis], rows))
-    g[unique] = for_nodes(factors, grid.periodic, grid.poles).solve(rhs)
+    once = _divergence(grid, edges, factors)
+    for_nodes(factors, grid.periodic, grid.poles).solve(once, once)
+    if not any(grid.periodic):
+        _close(grid, once)
+        return once
+    g = np.empty(grid.node_shape())
+    inside = g[unique]
+    compute.for_each(lambda rows: np.copyto(inside[rows], once[rows]), compute.slabs(once.shape[0], _ROWS))
     _close(grid, g)
     return g
 
@@ -85,11 +87,6 @@ def _mean_distances(grid: Grid, axis: int) -> Array:
     return np.concatenate([[0.0], np.cumsum(steps)])
 
 
-def _part(factors: Three, rows: slice) -> Array:
-    """Rows of the weights that are products of one number per axis."""
-    return outer((factors[0][rows], factors[1], factors[2]))
-
-
 def _close(grid: Grid, g: Array) -> None:
     """One value at each pole; the last along a seam from the first."""
     for axis, seam in enumerate(grid.periodic):
@@ -106,28 +103,45 @@ def _poles(grid: Grid) -> list[tuple[int, int, int]]:
     return [(axis, end, ring) for axis, ring in enumerate(rings) if ring is not None for end in grid.pole_ends(axis)]
 
 
-def _divergence(grid: Grid, edges: Three, weight: Weight) -> Array:
+def _divergence(grid: Grid, edges: Three, factors: Factors) -> Array:
     """d0^T W a at the nodes, those of a seam once."""
-    n1, n2, n3 = grid.node_shape()
-    out = np.empty((n1, n2, n3))
+    out = np.empty([n - seam for n, seam in zip(grid.node_shape(), grid.periodic, strict=True)])
+    weights = [tuple(np.ascontiguousarray(f) for f in products) for products in factors]
+    seams = np.array(grid.periodic)
+    compute.for_each(
+        lambda rows: _balance_nodes(*edges, *weights, seams, rows.start, rows.stop, out),
+        compute.slabs(out.shape[0], _ROWS),
+    )
+    return out
 
-    def work(rows: slice) -> None:
-        part = out[rows]
-        part[...] = 0.0
-        for axis in (1, 2):
-            flow = weight(axis, rows) * edges[axis][rows]
-            part[at(axis, slice(1, None))] += flow
-            part[at(axis, slice(None, -1))] -= flow
-            if grid.periodic[axis]:
-                part[at(axis, 0)] += flow[at(axis, -1)]
-        before, after = (
-            slice(max(rows.start - 1, 0), rows.stop - 1),
-            slice(rows.start, min(rows.stop, n1 - 1)),
-        )
-        part[before.start + 1 - rows.start :] += weight(0, before) * edges[0][before]
-        part[: after.stop - rows.start] -= weight(0, after) * edges[0][after]
 
-    compute.for_each(work, compute.slabs(n1, _ROWS))
-    if grid.periodic[0]:
-        out[0] += (weight(0, slice(n1 - 2, n1 - 1)) * edges[0][-1:])[0]
-    return np.ascontiguousarray(out[tuple(slice(None, -1) if seam else slice(None) for seam in grid.periodic)])
+@compute.kernel
+def _balance_nodes(a1, a2, a3, w1, w2, w3, seams, start, stop, out):  # type: ignore[no-untyped-def]
+    """What flows into each node less what flows out of it, along each axis in turn."""
+    _, m2, m3 = out.shape
+    n1, n2, n3 = a1.shape[0], a2.shape[1], a3.shape[2]
+    for i in range(start, stop):
+        for j in range(m2):
+            row = out[i, j]
+            row[:] = 0.0
+            if j > 0 or seams[1]:
+                _add(row, a2[i, (j - 1) % n2], w2[0][i] * w2[1][(j - 1) % n2], w2[2])
+            if j < n2:
+                _add(row, a2[i, j], -w2[0][i] * w2[1][j], w2[2])
+            along, w, factor = a3[i, j], w3[2], w3[0][i] * w3[1][j]
+            for k in range(1, m3):
+                row[k] += factor * w[k - 1] * along[k - 1]
+            for k in range(min(m3, n3)):
+                row[k] -= factor * w[k] * along[k]
+            if seams[2]:
+                row[0] += factor * w[n3 - 1] * along[n3 - 1]
+            if i > 0 or seams[0]:
+                _add(row, a1[(i - 1) % n1, j], w1[0][(i - 1) % n1] * w1[1][j], w1[2])
+            if i < n1:
+                _add(row, a1[i, j], -w1[0][i] * w1[1][j], w1[2])
+
+
+@compute.kernel
+def _add(row, a, factor, weight):  # type: ignore[no-untyped-def]
+    for k in range(row.size):
+        row[k] += factor * weight[k] * a[k]

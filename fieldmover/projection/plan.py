@@ -31,7 +31,7 @@ Mask = NDArray[np.bool_]
 Hole = Literal["neutral", "free"]
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(eq=False)
 class Plan:
     """The operator of a cleaning and its nearest separable one.
 
@@ -46,25 +46,22 @@ class Plan:
         Helps for the preconditioner where they are not (`nearest.Preconditioner`).
     metric : bool
         Whether the operator's conductances are those of the grid, on all faces.
-    frozen, free : tuple of three bool ndarrays, or None
-        Faces that keep their bits; faces that may change (None where there are no masks).
+    free : tuple of three bool ndarrays, or None
+        Faces that may change; None where there are no masks, or when they have done their work.
     excised : bool ndarray or None
+    counts : tuple of two int
+        Numbers of frozen faces and excised cells.
     """
 
     operator: ProjectionOperator
     factors: Factors
     direct: bool
-    scale: Array | None
+    scale: NDArray[np.float32] | None
     weakened: tuple[NDArray[np.intp], Array] | None
     metric: bool
-    frozen: Masks | None
-    free: Masks | None
-    excised: Mask | None
-
-    @property
-    def counts(self) -> tuple[int, int]:
-        """Numbers of frozen faces and excised cells."""
-        return sum(int(m.sum()) for m in self.frozen or ()), 0 if self.excised is None else int(self.excised.sum())
+    free: Masks | None = None
+    excised: Mask | None = None
+    counts: tuple[int, int] = (0, 0)
 
 
 def make_plan(
@@ -88,19 +85,21 @@ def make_plan(
     active = np.ones(grid.shape, dtype=bool)
     if factors is not None and frozen_faces is None and cut is None:
         operator = _operator(grid, [Products(f) for f in factors], active, is_open, hole)
-        return Plan(operator, factors, True, None, None, True, None, None, None)
+        return Plan(operator, factors, True, None, None, True)
     conductances = face_conductances(grid)
     user = face_weights(flux, weights, conductances)
     if user is not None:
-        for g, w in zip(conductances, user, strict=True):
-            g /= w
+        for axis in range(3):
+            np.divide(conductances[axis], user[axis], out=conductances[axis])
+    metric = user is None and frozen_faces is None
+    del user  # as large as the conductances
     free = None
     if frozen_faces is not None or cut is not None:
         free = _free_faces(conductances, frozen_faces, is_open, grid)
         active = _touched(free) if cut is None else _touched(free) & ~cut
     if factors is None:
         factors = nearest_factors(conductances, free)
-    scale = None if user is None else common_scale(conductances, factors)
+    scale = None if weights is None else common_scale(conductances, factors)
     weakened = None
     if frozen_faces is not None:
         whole = sums_over_faces(conductances)
@@ -109,8 +108,8 @@ def make_plan(
         weakened = weakened_cells(whole, sums_over_faces(conductances) * active)
         is_open = _open_somewhere(is_open, conductances)
     operator = _operator(grid, conductances, active, is_open, hole)
-    metric = user is None and frozen_faces is None
-    return Plan(operator, factors, False, scale, weakened, metric, frozen_faces, free, cut)
+    counts = sum(int(m.sum()) for m in frozen_faces or ()), 0 if cut is None else int(cut.sum())
+    return Plan(operator, factors, False, scale, weakened, metric, free, cut, counts)
 
 
 def _operator(grid: Grid, conductances: Conductances, active: Mask, is_open: Walls, hole: Hole) -> ProjectionOperator:

@@ -113,7 +113,7 @@ def project(
 
 
 def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) -> Cleaned:
-    operator, net = plan.operator, np.empty(flux.grid.shape)
+    operator, net, frozen = plan.operator, np.empty(flux.grid.shape), plan.counts[0] > 0
     if plan.free is not None:
         check_held_cells(flux.grid, flux.faces, operator.active, plan.excised)
     before = operator.source(flux.faces, net)
@@ -121,6 +121,7 @@ def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) 
         return Cleaned(flux.faces, "none", [], "divergence-free already", before, before)
     forest = None if plan.free is None else search(operator, plan.free, plan.excised)
     excess = check_islands(flux.grid, flux.faces, operator, plan.free, forest, net)
+    plan.free = None  # large, and no longer needed
 
     def start() -> Three:
         faces = (flux.f1.copy(), flux.f2.copy(), flux.f3.copy())
@@ -135,12 +136,13 @@ def _clean(flux: FaceFlux, plan: Plan, tolerance: float, quantum: float | None) 
         precondition = Preconditioner(operator, plan.factors, plan.scale, plan.weakened)
         faces, history = _iterate(operator, precondition, start, net, before.largest, tolerance)
         method, stopped = "conjugate gradients", "tolerance reached"
-        if plan.free is None:
+        if forest is None:
             # What the tolerance leaves goes in the weights of the nearest separable operator.
             products = replace(operator, conductances=[Products(f) for f in plan.factors])
             _direct(products, plan.factors, faces, net, before.largest)
-    close(faces, operator, forest or lines(operator), plan.frozen, quantum)
-    return Cleaned(faces, method, history, stopped, before, operator.source(faces, net))
+    del net  # makes room for the forest
+    close(faces, operator, forest or lines(operator), frozen, quantum)
+    return Cleaned(faces, method, history, stopped, before, operator.source(faces, np.empty(flux.grid.shape)))
 
 
 def _is_neutral(operator: ProjectionOperator, faces: Three) -> bool:

@@ -158,7 +158,8 @@ def compare(before: FaceFlux, after: Three, conductances: Conductances, regions:
         return float(_energies(_weights(grid, conductances, rows), _of_cells(before.faces, rows)).sum())
 
     old = math.fsum(compute.for_each(energy, slabs))
-    density = old / math.fsum(compute.for_each(lambda rows: float(near_volumes(grid, rows).sum()), slabs))
+    volume = math.fsum(compute.for_each(lambda rows: float(near_volumes(grid, rows).sum()), slabs))
+    density = old / volume if volume > 0 else 0.0  # of a ring of two cells hardly any volume is seen
 
     def work(rows: slice) -> tuple[float, float, float, int, list[float]]:
         weights, a, b = (

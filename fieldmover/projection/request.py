@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from typing import Literal, get_args
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from fieldmover import compute
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import FaceFlux, Three
 from fieldmover.forms.measures import near_volumes
@@ -21,6 +22,7 @@ Wall = Literal["open", "fixed"]
 WallsLike = Wall | Sequence[Wall | tuple[Wall, Wall]] | Mapping[str, Wall | tuple[Wall, Wall]]
 WeightsLike = Sequence[ArrayLike] | Callable[[Array], ArrayLike]
 
+_SLAB = 1 << 15  # cells worked on at a time
 ROUND_OFF = 1e-14  # no solver gets below this
 
 
@@ -104,7 +106,7 @@ def frozen_masks(grid: Grid, frozen: Sequence[ArrayLike] | None) -> Masks | None
     """
     if frozen is None:
         return None
-    masks = _three(grid, frozen, "frozen", np.bool_)
+    masks = [mask.copy() for mask in _three(grid, frozen, "frozen", np.bool_)]
     for axis, seam in enumerate(grid.periodic):
         if seam:
             both = masks[axis][at(axis, 0)] | masks[axis][at(axis, -1)]
@@ -159,8 +161,7 @@ def face_weights(flux: FaceFlux, weights: WeightsLike | None, conductances: Thre
     if weights is None:
         return None
     if callable(weights):
-        strength = _strength_at_faces(flux, conductances)
-        weights = [weights(b) for b in strength]
+        weights = [weights(b) for b in _strength_at_faces(flux, conductances)]
     arrays = _three(flux.grid, weights, "weights", np.float64)
     for axis, array in enumerate(arrays):
         bad = ~(np.isfinite(array) & (array > 0))
@@ -180,7 +181,7 @@ def _three(grid: Grid, values: Sequence[ArrayLike], what: str, dtype: type) -> l
         raise FieldError(f"{what}: {len(values)} arrays, expected 3")
     arrays: list[NDArray] = []
     for axis, value in enumerate(values):
-        array = np.array(value)
+        array = np.asarray(value)
         if array.shape != grid.face_shape(axis) or (dtype is np.bool_) != (array.dtype == np.bool_):
             raise FieldError(
                 f"{what} of axis {axis + 1}: {array.dtype} array of shape {array.shape}, expected "
@@ -190,7 +191,7 @@ def _three(grid: Grid, values: Sequence[ArrayLike], what: str, dtype: type) -> l
     return arrays
 
 
-def _strength_at_faces(flux: FaceFlux, conductances: Three) -> list[Array]:
+def _strength_at_faces(flux: FaceFlux, conductances: Three) -> Iterator[Array]:
     """|B| at the faces: the mean of the cells beside them, whose B^2 is their energy over their volume."""
     grid = flux.grid
     square = np.zeros(grid.shape)
@@ -200,12 +201,13 @@ def _strength_at_faces(flux: FaceFlux, conductances: Three) -> list[Array]:
             part[at(axis, 0)] *= 2.0
             part[at(axis, -1)] *= 2.0
         square += 0.5 * (part[at(axis, slice(None, -1))] + part[at(axis, slice(1, None))])
-    strength = np.sqrt(square / near_volumes(grid, slice(0, grid.shape[0])))
-    at_faces = []
+    for rows in compute.slabs(grid.shape[0], _SLAB // (grid.shape[1] * grid.shape[2])):
+        square[rows] /= near_volumes(grid, rows)
+    strength = np.sqrt(square, out=square)
+    del part
     for axis in range(3):
         padded = np.concatenate(
             [strength[at(axis, slice(-1, None) if grid.periodic[axis] else slice(0, 1))], strength,
              strength[at(axis, slice(0, 1) if grid.periodic[axis] else slice(-1, None))]], axis=axis,
         )  # fmt: skip
-        at_faces.append(0.5 * (padded[at(axis, slice(None, -1))] + padded[at(axis, slice(1, None))]))
-    return at_faces
+        yield 0.5 * (padded[at(axis, slice(None, -1))] + padded[at(axis, slice(1, None))])

@@ -82,7 +82,9 @@ class SeparableSolver:
         self.singular = not any(line.grounded for line in lines)
         t, a, b = _through_axis(lines, masses, {axis for axis, _, _ in collapsed})
         self._axis = t
-        self._bases: dict[int, Basis] = {e: basis_of(lines[e], masses[t][e]) for e in (a, b)}
+        # One axis to a thread: the eigenvectors of one are too few to share among several.
+        bases = compute.for_each(lambda e: basis_of(lines[e], masses[t][e]), (a, b))
+        self._bases: dict[int, Basis] = dict(zip((a, b), bases, strict=True))
         scale = self._bases[a].scale * self._bases[b].scale
         line = lines[t]
         wrap = line.wrap * scale if line.size > 1 else 0.0  # a point is no neighbour of itself
