@@ -4,9 +4,11 @@ import numpy as np
 import pytest
 
 from fieldmover import compute
-from fieldmover.errors import FieldError
+from fieldmover.errors import FieldError, GridError
 from fieldmover.forms.fields import CellContent
-from fieldmover.grids import cartesian_grid, cylindrical_grid, spherical_grid, warped_grid
+from fieldmover.grids import cartesian_grid, cylindrical_grid, placed, spherical_grid, warped_grid
+from fieldmover.grids.kerr import kerr_schild_grid
+from fieldmover.grids.placement import turn_about
 from fieldmover.interpolation import fluid
 from fieldmover.interpolation.fluid import FluidPlan, move_content
 from tests.reference import _slabs
@@ -145,6 +147,122 @@ def test_periodic_box():
     assert abs(total(moved) / total(content) - 1) < 1e-14
     exact = integral(target, lambda x, y, z: 2 + np.sin(2 * np.pi * x) * np.cos(2 * np.pi * y) + 0 * z)
     assert np.abs(moved.cells / exact.cells - 1).max() < 0.05
+
+
+def sheared(x, y, z):
+    return x + np.sin(2 * y), y + 0.3 * np.sin(z), z + x * y
+
+
+UNEVEN = np.array([0, 0.05, 0.2, 0.45, 0.5, 0.8, 1.0])
+
+
+@pytest.mark.parametrize(("low", "high"), [(0.3, 1.3), (-2.0, 1.0), (3.7, 4.2)])
+@pytest.mark.parametrize("seam", [False, True])
+def test_a_target_beyond_a_periodic_box_sees_it_repeated(low, high, seam):
+    source = cartesian_grid(UNEVEN, line(0, 1, 4), line(0, 1, 4), periodic=(True,) * 3)
+    target = cartesian_grid(line(low, high, 15), line(0, 1, 5), line(0.25, 1.25, 4), periodic=(seam, True, True))
+    plan = FluidPlan(source, target)
+    assert (plan.coverage == 1).all()
+    one = plan.move(CellContent(source, source.cell_volumes())).cells / target.cell_volumes()
+    np.testing.assert_allclose(one, 1, rtol=1e-12)
+    mass = CellContent(source, source.cell_volumes() * np.random.default_rng(1).uniform(0, 9, source.shape))
+    moved, velocity = plan.move_by_mass(mass, np.random.default_rng(2).uniform(-1, 1, source.shape))
+    periods = high - low
+    if periods == round(periods):
+        assert plan.contained.any()
+        assert total(moved) == pytest.approx(periods * total(mass), rel=1e-12 if seam else 3e-2)
+    assert np.abs(velocity).max() <= 1
+
+
+@pytest.mark.parametrize("origin", [(0.5, 0.5, 0.5), (0, 0, 0), (0.1, 0.9, 2.3)])
+def test_a_small_sphere_anywhere_in_a_coarse_periodic_box(origin):
+    """Its cells beside the axis are far smaller than those of the box."""
+    source = cartesian_grid(*[line(0, 1, 8)] * 3, periodic=(True,) * 3)
+    target = placed(spherical_grid(line(0.05, 0.4, 8), line(0, np.pi, 8), line(0, 2 * np.pi, 16)), origin)
+    plan = FluidPlan(source, target)
+    assert plan.coverage.min() == 1
+    one = plan.move(CellContent(source, source.cell_volumes())).cells / target.cell_volumes()
+    np.testing.assert_allclose(one, 1, rtol=1e-12)
+    wave = CellContent(source, source.cell_volumes() * (2 + np.sin(2 * np.pi * source.centres()[0])))
+    exact = 2 + np.sin(2 * np.pi * target.centres()[0])
+    np.testing.assert_allclose(plan.move(wave).cells / target.cell_volumes(), exact, rtol=0.15)
+
+
+@pytest.mark.parametrize("turn", [None, turn_about((1, 2, 3), 0.5)])
+def test_a_periodic_target_in_a_larger_source_is_a_box(turn):
+    source = cube(10, 2.0)
+    content = CellContent(source, source.cell_volumes() * (3 + source.centres()[0]))
+    nodes = [line(-0.5, 0.5, 4), line(-0.6, 0.4, 3), line(-0.5, 0.5, 4)]
+    walls, seams = (placed(cartesian_grid(*nodes, periodic=(seam,) * 3), turn=turn) for seam in (False, True))
+    assert np.array_equal(move_content(content, seams).cells, move_content(content, walls).cells)
+
+
+def test_a_target_in_another_unit_of_length_is_named():
+    source = cartesian_grid([0, 1], [0, 1], [0, 1], periodic=(True, False, False))
+    with pytest.raises(GridError, match="spans 100 periods of the source along x"):
+        FluidPlan(source, cube(4, 50.0))
+
+
+@pytest.mark.parametrize("parts", [2, 3])
+@pytest.mark.parametrize(
+    "grid",
+    [
+        lambda a, b, c: kerr_schild_grid(1 + a, np.pi * b, 2 * np.pi * c, 0.7),
+        lambda a, b, c: cylindrical_grid(a, 2 * np.pi * c, b),
+        lambda a, b, c: warped_grid(a, b, c, sheared),
+    ],
+    ids=["spheroidal", "cylindrical", "warped"],
+)
+@pytest.mark.parametrize("cells", [(1, 1, 1), (2, 1, 3), (3, 4, 5)])
+def test_restarts_keep_coarse_masses_on_few_cells(grid, cells, parts):
+    """However bent the cells are, those of one grid are parts of those of the other."""
+    rng = np.random.default_rng(4)
+    nodes = [np.concatenate([[0], np.sort(rng.uniform(0, 1, n - 1)), [1]]) for n in cells]
+    finer = [np.append((q[:-1, None] + np.diff(q)[:, None] * np.arange(parts) / parts).ravel(), 1) for q in nodes]
+    coarse, fine = grid(*nodes), grid(*finer)
+    content = CellContent(coarse, rng.uniform(0, 1, coarse.shape) * coarse.cell_volumes())
+    moved = move_content(content, fine)
+    shape = [n for cells_along in coarse.shape for n in (cells_along, parts)]
+    np.testing.assert_allclose(moved.cells.reshape(shape).sum(axis=(1, 3, 5)), content.cells, rtol=1e-13)
+    np.testing.assert_allclose(move_content(moved, coarse).cells, content.cells, rtol=1e-13)
+
+
+@pytest.mark.parametrize("ring", [1, 2])
+def test_rings_of_one_or_two_cells_that_leave_the_target(ring):
+    """All corners of such cells may lie in the target and most of the cell not."""
+    source = cylindrical_grid(line(1, 3, 6), line(-np.pi, np.pi, ring), [-1, 0])
+    target = cube(9, 1.0, (-1.6, 0.1, -0.2))
+    plan = FluidPlan(source, target)
+    one = plan.move(CellContent(source, source.cell_volumes())).cells / target.cell_volumes()
+    assert not plan.contained.any()
+    assert one.max() < 1 + 1e-12
+    np.testing.assert_allclose(one, plan.coverage, rtol=0, atol=1e-12)
+
+
+def test_a_wedge_into_a_full_turn_that_begins_within_it():
+    """Target cells a turn further on are in the wedge too."""
+    source = spherical_grid([1, 1.5], line(1, np.pi, 5), line(0.3, 0.3 + np.pi, 2))
+    target = spherical_grid(line(1, 1.5, 3), line(1, np.pi, 5), line(1, 1 + 2 * np.pi, 16))
+    plan = FluidPlan(source, target)
+    one = plan.move(CellContent(source, source.cell_volumes())).cells / target.cell_volumes()
+    azimuth = (target.nodes[2] - 0.3) % (2 * np.pi)
+    inside = (azimuth[:-1] < np.pi) & (azimuth[1:] < np.pi) & (azimuth[1:] > azimuth[:-1])
+    assert plan.contained.all()
+    assert one.max() < 1 + 1e-12
+    np.testing.assert_allclose(one[:, :, inside], 1, rtol=1e-12)
+    shifted = spherical_grid([1, 1.5], line(1, np.pi, 5), line(0.3 - 2 * np.pi, 0.3 - np.pi, 2))
+    moved = move_content(CellContent(shifted, source.cell_volumes()), source)
+    np.testing.assert_allclose(moved.cells, source.cell_volumes(), rtol=1e-13)
+
+
+@pytest.mark.parametrize("ring", [9, 10, 16])
+def test_a_constant_on_coarse_rings(ring):
+    """Cells of 40 degrees are far from parallelepipeds, in both grids."""
+    source = cylindrical_grid(line(0, 1.5, 13), line(0, 2 * np.pi, 10), line(-1, 1, 12))
+    target = spherical_grid(line(0.1, 2.1, 8), line(0, np.pi, 12), line(0.3, 0.3 + 2 * np.pi, ring))
+    plan = FluidPlan(source, target)
+    one = plan.move(CellContent(source, source.cell_volumes())).cells / target.cell_volumes()
+    np.testing.assert_allclose(one, plan.coverage, rtol=0, atol=1e-12)
 
 
 @pytest.mark.parametrize(

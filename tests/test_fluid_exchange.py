@@ -87,6 +87,20 @@ def test_signs_come_before_exactness():
     assert after.sum() == pytest.approx(content.sum(), rel=1e-14)
 
 
+def test_cells_far_from_those_that_gave_too_much_are_exact():
+    """As above, with forty cells before that have little to give each other."""
+    held = np.concatenate(
+        [np.random.default_rng(3).uniform(0.97, 1.03, 20), np.ones(20), np.full(10, 1.9), np.full(10, 0.1)]
+    )
+    volume = np.ones(60)
+    volume[:20] = held[:20].mean()
+    held, volume = held.reshape(60, 1, 1), volume.reshape(60, 1, 1)
+    found, _ = even_out((False,) * 3, volume, volume > 0, held, 0 * held)
+    after = found.apply(held)
+    assert np.abs(after[40:] - 1).max() > 0.5
+    np.testing.assert_allclose(after[:40], volume[:40], rtol=1e-12)
+
+
 @pytest.mark.parametrize("shape", [(12, 9, 10), (16, 16, 8)])
 def test_multigrid_comes_near_the_sparse_solution(shape):
     """Against scipy's direct solver, on a grid with a seam and a hole."""

@@ -128,3 +128,11 @@ def test_bad_values_are_refused():
     values[1, 0, 2, 1] = np.inf
     with pytest.raises(FieldError, match=r"1 are not finite, the first inf at index \[1, 0, 2, 1\]"):
         move_points(values, source, source)
+
+
+def test_a_periodic_box_repeats_itself():
+    source = cartesian_grid(*[np.linspace(0, 1, 17)] * 3, periodic=(True,) * 3)
+    target = cartesian_grid(np.linspace(-1.4, 2.6, 21), [0, 0.3, 1], [0.2, 0.7])
+    moved, known = move_points(np.sin(2 * np.pi * source.centres()[0]), source, target)
+    assert known.all()
+    np.testing.assert_allclose(moved, np.sin(2 * np.pi * target.centres()[0]), atol=1e-3)

@@ -82,3 +82,15 @@ def test_same_bits_on_one_and_two_threads():
     finally:
         compute.set_threads(before)
     assert all(np.array_equal(a, b) for a, b in zip(*found, strict=True))
+
+
+@pytest.mark.filterwarnings("error")
+def test_faces_between_two_poles_have_no_weight():
+    """One cell from pole to pole: the corners of its faces along the ring all lie on the axis."""
+
+    def spindle(r, t, p):
+        return r * t * (1 - t) * np.cos(p), r * t * (1 - t) * np.sin(p), r * (1 - 2 * t)
+
+    turn = np.linspace(0, 2 * np.pi, 7)
+    grid = fm.warped_grid([1, 2, 3], [0, 1], turn, spindle, (False, False, True), (None, "both", None))
+    assert not face_conductances(grid)[2].any()

@@ -151,3 +151,37 @@ def test_components_that_vanish_are_not_integrated_edge_by_edge(monkeypatch):
     source, target = sphere(16), off_axis(32)
     fm.move_flux(fm.curl(fm.potential_from_function(source, dipole)), target)
     assert sum(counts) < 0.05 * 3 * 32**3
+
+
+@pytest.mark.parametrize("outside", ["least energy", "zero"])
+@pytest.mark.parametrize("target", [sphere(6), box((3, 4), (3, 4), (3, 4))(3)])
+def test_nothing_arrives_where_the_source_does_not_reach(target, outside):
+    source = box((7, 8), (7, 8), (7, 8))(4)
+    moved = fm.move_flux(flux_on(source, WAVE), target, outside=outside)
+    assert not any(f.any() for f in moved.faces)
+
+
+@pytest.mark.parametrize("outside", ["least energy", "zero"])
+def test_a_target_round_a_wedge_that_begins_within_it(outside):
+    """Its last cells are in the wedge too, a turn further on."""
+    shell, theta = np.linspace(1, 2, 9), np.linspace(0.8, 2.2, 9)
+    source = fm.spherical_grid(shell, theta, np.linspace(0.3, 0.3 + np.pi, 13))
+    target = fm.spherical_grid(shell, theta, np.linspace(0.3, 0.3 + 2 * np.pi, 25) + np.pi / 4)
+    flux = flux_on(source, WAVE)
+    moved = fm.move_flux(flux, target, outside=outside)
+    size = np.abs(flux.f1).max()
+    np.testing.assert_allclose(moved.f1[:, :, -3:], flux.f1[:, :, :3], atol=2e-3 * size)
+    np.testing.assert_allclose(moved.f1[:, :, :9], flux.f1[:, :, 3:], atol=2e-3 * size)
+    a_turn_on = fm.spherical_grid(shell, theta, source.nodes[2] + 2 * np.pi)
+    np.testing.assert_allclose(fm.move_flux(flux, a_turn_on, outside="refuse").f1, flux.f1, atol=1e-13 * size)
+
+
+def test_restarts_in_a_frame_of_their_own():
+    """Grids placed alike are in the same coordinates, although each was placed for itself."""
+    nodes = np.linspace(1, 2, 5), np.linspace(0, np.pi, 7), np.linspace(0, 2 * np.pi, 9)
+    finer = [np.sort(np.append(q, 0.5 * (q[1:] + q[:-1]))) for q in nodes]
+    source, target = (fm.placed(fm.spherical_grid(*q), (1, 2, 3), turn_about((1, 1, 0), 0.4)) for q in (nodes, finer))
+    flux = flux_on(source, WAVE)
+    moved = fm.move_flux(flux, target)
+    coarse = moved.f1[::2].reshape(5, 6, 2, 8, 2).sum(axis=(2, 4))
+    np.testing.assert_allclose(coarse, flux.f1, atol=1e-14 * np.abs(flux.f1).max())

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 import fieldmover as fm
+from fieldmover.grids.placement import turn_about
 from tests.cases import largest_error
 
 MEAN = (0.7, -1.3, 0.4)
@@ -71,3 +72,21 @@ def test_a_uniform_field_alone():
     for face, area, b in zip(moved.faces, target.face_areas(), MEAN, strict=True):
         np.testing.assert_allclose(face, b * area, rtol=1e-12)
     assert np.abs(fm.divergence(moved).cells).max() == 0
+
+
+@pytest.mark.parametrize("order", [1, 3, 5])
+@pytest.mark.parametrize("turned", [False, True])
+def test_a_target_beyond_the_box_sees_it_repeated(order, turned):
+    """Of a grid in the same coordinates, and of one that has to be located."""
+    source = fm.curl(fm.potential_from_function(box(16), lambda *x: tuple(np.sin(2 * np.pi * np.roll(x, 1, axis=0)))))
+    nodes = np.linspace(-1.3, 1.9, 65), np.linspace(0.4, 0.9, 11), np.linspace(0, 1, 17)
+    target = fm.cartesian_grid(*nodes)
+    inner = fm.cartesian_grid(np.linspace(0.2, 0.7, 11), nodes[1], nodes[2])  # row 30 of the target is row 0 here
+    if turned:
+        target, inner = (fm.placed(grid, turn=turn_about((0, 0, 1), 1e-9)) for grid in (target, inner))
+    moved = fm.move_flux(source, target, order=order, outside="refuse")
+    once = fm.move_flux(source, inner, order=order)
+    assert moved.f1.std() > 1e-3 * once.f1.max()
+    for many, few in zip(moved.faces, once.faces, strict=True):
+        for first in (10, 30, 50):  # one period is 20 cells
+            np.testing.assert_allclose(many[first : first + 10], few[:10], atol=1e-6 * np.abs(few).max())

@@ -120,7 +120,8 @@ def face_conductances(grid: Grid) -> Three:
         for end in grid.pole_ends(axis):
             g[at(axis, end)] = 0.0
         if grid.periodic[axis]:  # half cells on both sides, one after the other
-            g[at(axis, 0)] = g[at(axis, -1)] = 1.0 / (1.0 / g[at(axis, 0)] + 1.0 / g[at(axis, -1)])
+            with np.errstate(divide="ignore"):  # of faces without area, which stay at 0
+                g[at(axis, 0)] = g[at(axis, -1)] = 1.0 / (1.0 / g[at(axis, 0)] + 1.0 / g[at(axis, -1)])
     return result
 
 

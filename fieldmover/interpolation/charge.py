@@ -253,16 +253,13 @@ def clear_centre(grid: Grid, centre: ArrayLike) -> Array | None:
     (array([1., 0., 0.]), array([0.5, 0. , 0. ]), None)
     """
     place = _checked_place(centre)
-    locator = Locator(grid)
-    flat = int(locator.cells(place[:, None])[0])
-    if flat < 0:
+    flat, within = Locator(grid).places(place[:, None])
+    if flat[0] < 0:
         return None
-    cell, q = np.unravel_index(flat, grid.shape), locator.coordinates(place[:, None])[:, 0]
-    low = np.array([nodes[i] for nodes, i in zip(grid.nodes, cell, strict=True)])
-    high = np.array([nodes[i + 1] for nodes, i in zip(grid.nodes, cell, strict=True)])
-    if (np.abs(q - 0.5 * (low + high)) < _CLEAR * (high - low)).all():
+    if (np.abs(within) < _CLEAR).all():
         return place
-    middle = (0.5 * (low + high))[:, None]
+    cell = np.unravel_index(flat, grid.shape)
+    middle = (0.5 * (nodes[i] + nodes[i + 1]) for nodes, i in zip(grid.nodes, cell, strict=True))
     return np.concatenate(grid.map.to_cartesian(*middle))
 
 

@@ -72,6 +72,8 @@ def fill(flux: FaceFlux, known: Masks, outside: Outside, quantum: float) -> Face
         )
     faces = tuple(np.where(mask, f, 0.0) for mask, f in zip(known, flux.faces, strict=True))
     start = FaceFlux(flux.grid, (faces[0], faces[1], faces[2]))
+    if not any(mask.any() for mask in known):
+        return start
     frozen = known if outside == "least energy" else _all_but_border(flux.grid, known)
     filled, _ = project(start, frozen=frozen, tolerance=_TOLERANCE, quantum=quantum)
     return filled

@@ -124,8 +124,9 @@ def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, roo
 
     Notes
     -----
-    Where nothing has room, what a connected set of cells lacks as a whole is spread over it evenly. If a cell would
-    pass on nearly all it holds, all flows are made smaller and nothing is exact: signs come first.
+    Where nothing has room, what a connected set of cells lacks as a whole is spread over it evenly. What leaves a cell
+    that would pass on nearly all it holds is made smaller, and then it and cells near it are not exact: signs come
+    first.
 
     Examples
     --------
@@ -152,10 +153,11 @@ def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, roo
     extra[free | (room == 0)] = 0.0
     loss = np.empty(held.shape)
     in_slabs(lambda a, b: _losses(a, b, held, extra, room, flow, loss), held.shape)
-    most = float(loss.max())
-    if most > _MOST:
-        flow *= _MOST / most
-        extra *= _MOST / most
+    if loss.max() > _MOST:
+        part = _MOST / np.maximum(loss, _MOST)  # of what leaves each cell
+        for axis, across in enumerate(flow):
+            across *= np.where(across > 0, part, np.roll(part, -1, axis=axis))
+        extra *= np.where(extra < 0, part, 1.0)
     return Exchange(held, extra, flow)
 
 

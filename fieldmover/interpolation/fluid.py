@@ -27,6 +27,7 @@ from fieldmover.interpolation.aligned import joins_cells
 from fieldmover.interpolation.balance import balance_columns, balance_rows, received
 from fieldmover.interpolation.carry import centre, deviations, receive
 from fieldmover.interpolation.exchange import even_out
+from fieldmover.interpolation.images import laid_out
 from fieldmover.interpolation.overlaps import Overlaps, collect, overlaps
 from fieldmover.interpolation.parcels import parcels
 from fieldmover.interpolation.reconstruct import reconstruct
@@ -58,16 +59,18 @@ def move_content(content: CellContent, target: Grid) -> CellContent:
     -------
     CellContent
         On the target. Every source cell whose corners all lie in the target gives exactly its content (the total is
-        kept to round-off). A source cell that the target's boundary cuts gives what its reconstruction holds in
-        the measured part of it inside, give or take some 0.3 %. Contents are sums of volumes times densities within
-        the range of the source cells there and their neighbours, and the volumes in a target cell add up to its own,
-        or to the part of it that the source reaches: a constant density stays constant to round-off, as far as both
-        grids give the region they share one volume.
+        kept to round-off), one of a periodic box once for each image of it. A source cell that the target's boundary
+        cuts gives what its reconstruction holds in the measured part of it inside, give or take some 0.3 %. Contents
+        are sums of volumes times densities within the range of the source cells there and their neighbours, and the
+        volumes in a target cell add up to its own, or to the part of it that the source reaches: a constant density
+        stays constant to round-off, as far as both grids give the region they share one volume.
 
     Raises
     ------
     FieldError
         If a content is negative or not finite.
+    GridError
+        If the target spans more than 16 periods of a periodic box.
 
     Examples
     --------
@@ -94,7 +97,13 @@ class FluidPlan:
     coverage : ndarray, shape of the target
         Part of each target cell that the source reaches, 0 to 1.
     contained : ndarray of bool, shape of the source
-        Source cells whose corners all lie in the target, so that they give all they hold.
+        Source cells whose corners all lie in the target, so that they give all they hold; those of a periodic box as
+        often as images of them do.
+
+    Raises
+    ------
+    GridError
+        As `move_content`.
 
     Notes
     -----
@@ -115,15 +124,20 @@ class FluidPlan:
 
     def __init__(self, source: Grid, target: Grid) -> None:
         self.source, self.target = source, target
-        self._volume = source.cell_volumes().reshape(-1)
-        self._view, back = View(target, source), View(source, target)
+        self._images, self._cells, self._box = laid_out(source, target)
+        self._volume = self._images.cell_volumes().reshape(-1)
+        self._view, back = View(target, self._images), View(self._images, self._box)
         irregular = self._measure()
-        self.contained, near, split = seen(back, irregular)
+        self._contained, near, split = seen(back, irregular)
         if near.any():
             self._cut(back, near, split, irregular)
         self._balance()
         self._rescue(back, split)
         self._even_out()
+        self.contained = self._contained
+        if self._cells is not None:
+            self.contained = np.zeros(source.shape, dtype=np.bool_)
+            np.logical_or.at(self.contained, np.ix_(*self._cells), self._contained)
 
     def _measure(self) -> Flags:
         """Measure the overlaps of regular cells, keeping them while there is room; mark the irregular cells."""
@@ -146,8 +160,8 @@ class FluidPlan:
 
     def _cut(self, back: View, near: Flags, split: NDArray[np.int8], irregular: Flags) -> None:
         """Overlaps of the irregular target cells, seen from the source cells near them."""
-        wanted, volume = irregular.reshape(-1), self._volume.reshape(self.source.shape)
-        strange = np.zeros(self.source.shape, dtype=np.bool_)
+        wanted, volume = irregular.reshape(-1), self._volume.reshape(self._images.shape)
+        strange = np.zeros(self._images.shape, dtype=np.bool_)
 
         def work(whole: Block) -> tuple:
             where = _bounds(near, whole)
@@ -165,13 +179,27 @@ class FluidPlan:
         found.append((receiver[kept], giver[kept], amount[kept], offset[kept]))
         receiver, giver, amount, offset = (np.concatenate(column) for column in zip(*found, strict=True))
         part = amount / self._target_volume.reshape(-1)[receiver]
-        self._kept.append(collect(receiver, giver, part, offset))
         reach = np.bincount(receiver, part, minlength=self.coverage.size)
-        nearly = np.flatnonzero(wanted & (reach > _NEARLY))
-        fine = np.full((nearly.size, 3), 4, dtype=np.int8)
-        _, giver, volume, _ = parcels(self._view, nearly, fine, self._target_volume)
-        inside = np.bincount(giver, volume, minlength=reach.size) / self._target_volume.reshape(-1)
-        reach[inside > 0.999] = 1.0
+        cells = np.flatnonzero(wanted)
+        fine = np.full((cells.size, 3), 4, dtype=np.int8)
+        own_giver, own, volume, own_offset = parcels(self._view, cells, fine, self._target_volume, True)
+        own_part = volume / self._target_volume.reshape(-1)[own]
+        inside = np.bincount(own, own_part, minlength=reach.size)
+        around = np.zeros(reach.size)
+        np.maximum.at(around, own, self._volume[own_giver])
+        # so small that parcels of the source cells round them pass them by
+        missed = (reach < _NEARLY * inside) & (self._target_volume.reshape(-1) < around)
+        first, second = ~missed[receiver], missed[own]
+        self._kept.append(
+            collect(
+                np.append(receiver[first], own[second]),
+                np.append(giver[first], own_giver[second]),
+                np.append(part[first], own_part[second]),
+                np.append(offset[first], own_offset[second], axis=0),
+            )
+        )
+        reach[missed] = inside[missed]
+        reach[(inside > 0.999) & (reach > _NEARLY)] = 1.0
         self.coverage[irregular] = np.minimum(reach, 1.0).reshape(irregular.shape)[irregular]
 
     def _block(self, n: int) -> Overlaps:
@@ -195,7 +223,7 @@ class FluidPlan:
     def _balance(self) -> None:
         """Factors of source and target cells that make overlaps add up to volumes; the source has the last word."""
         volume, whole = self._target_volume.reshape(-1), (self.coverage == 1).reshape(-1)
-        contained = self.contained.reshape(-1)
+        contained = self._contained.reshape(-1)
         self._u, self._v = np.ones(self._volume.size), np.zeros(volume.size)
         columns = self._columns()
 
@@ -213,7 +241,7 @@ class FluidPlan:
 
     def _even_out(self) -> None:
         """What the target cells still miss comes from their neighbours, or from source cells that are cut anyway."""
-        volume, contained = self._target_volume, self.contained.reshape(-1)
+        volume, contained = self._target_volume, self._contained.reshape(-1)
         held, cut = np.zeros(volume.shape), np.zeros(volume.shape)
         flat = held.reshape(-1), cut.reshape(-1)
         compute.for_each(
@@ -222,10 +250,10 @@ class FluidPlan:
         receiver, giver, share = self._saved
         np.add.at(flat[0], receiver, self._volume[giver] * share)
         whole = self.coverage == 1
-        if joins_cells(self.source, self.target):
+        if joins_cells(self._images, self.target):
             # What cells miss is the error of quadrature of their volumes, and no reason to give away content.
             volume = np.where(whole, held, volume)
-        self._exchange, self.coverage = even_out(self.target.periodic, volume, whole, held, cut)
+        self._exchange, self.coverage = even_out(self._box.periodic, volume, whole, held, cut)
         # what cut source cells give is multiplied by 1 + this
         self._more = np.divide(self._exchange.extra, cut, out=np.zeros_like(cut), where=cut > 0).reshape(-1)
 
@@ -238,7 +266,7 @@ class FluidPlan:
         receiver, giver, volume, _ = parcels(back, lost, split.reshape(-1, 3)[lost], self._volume)
         total = np.bincount(giver, volume, minlength=self._volume.size)
         self._saved = receiver, giver, volume / total[giver]
-        self.contained.reshape(-1)[lost[total[lost] == 0.0]] = False
+        self._contained.reshape(-1)[lost[total[lost] == 0.0]] = False
 
     def move(self, content: CellContent) -> CellContent:
         """Move one quantity; see `move_content`.
@@ -302,7 +330,7 @@ class FluidPlan:
         """Reconstruction of the density, times the balancing factor of the source cell."""
         if content.grid is not self.source:
             raise FieldError(f"contents on {content.grid!r}, expected on the source of the plan, {self.source!r}")
-        volume = self._volume.reshape(self.source.shape)
+        volume = self.source.cell_volumes()
         return self._form(content.cells / volume, None, volume, self._u)
 
     def _form(self, field: Array, carrier: Array | None, weight: Array, scale: Array) -> Array:
@@ -311,12 +339,13 @@ class FluidPlan:
         `weight` is what the overlaps of a contained cell add up to. Returns one row per cell: value in the middle,
         three slopes per cell, all times `scale`; then two columns of work space.
         """
-        form = reconstruct(self.source, field)
+        form = self._on_images(reconstruct(self.source, field).reshape(*self.source.shape, -1))
+        form, weight = form.reshape(-1, form.shape[-1]), self._on_images(weight).reshape(-1)
         columns = self._columns()
         self._scatter(
             lambda block, column: deviations(*block.arrays, self._v, *_carrier(carrier), form, column), columns
         )
-        contained, weight = self.contained.reshape(-1), weight.reshape(-1)
+        contained = self._contained.reshape(-1)
         self._over_source(lambda part: centre(part.start, part.stop, columns, weight, contained, scale, form))
         return form
 
@@ -328,8 +357,12 @@ class FluidPlan:
             range(len(self._kept)),
         )
         receiver, giver, share = self._saved
-        np.add.at(out, receiver, content.reshape(-1)[giver] * share)
+        np.add.at(out, receiver, self._on_images(content).reshape(-1)[giver] * share)
         return self._exchange.apply(out.reshape(self.target.shape))
+
+    def _on_images(self, values: Array) -> Array:
+        """Values of source cells, shape (n1, n2, n3, ...), for all their images."""
+        return values if self._cells is None else values[np.ix_(*self._cells)]
 
     @staticmethod
     def _check(cells: Array, what: str, positive: bool) -> None:

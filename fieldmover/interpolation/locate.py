@@ -68,7 +68,8 @@ class Locator:
         Returns
         -------
         q : ndarray, shape (3, N)
-            Coordinates, angles brought into the range of the nodes. For a grid without closed form NaN outside.
+            Coordinates, angles brought into the range of the nodes (`close` does so round other seams). For a grid
+            without closed form NaN outside.
         dq : ndarray, shape (3, T, N)
             Components dq^i of the tangents.
 
@@ -105,14 +106,28 @@ class Locator:
 
     def cells(self, x: Array) -> NDArray[np.int64]:
         """Flat index of the cell that holds each point, -1 outside the grid; x of shape (3, N)."""
+        return self.places(x)[0]
+
+    def places(self, x: Array) -> tuple[NDArray[np.int64], Array]:
+        """The cells that hold points, x of shape (3, N), and where in them.
+
+        Returns
+        -------
+        cells : ndarray of int64, shape (N,)
+            Flat indices, -1 outside the grid.
+        within : ndarray, shape (3, N)
+            Coordinates relative to the middle of the cell, in cells: -0.5 to 0.5 inside.
+        """
         q = self.coordinates(x)
-        flat = np.zeros(x.shape[1], dtype=np.int64)
+        self.close(q)
+        flat, within = np.zeros(x.shape[1], dtype=np.int64), np.empty_like(q)
         outside = ~inside(self.grid, q)
         for axis, nodes in enumerate(self.grid.nodes):
-            place = np.searchsorted(nodes, q[axis], side="right") - 1
-            flat = flat * self.grid.shape[axis] + np.clip(place, 0, self.grid.shape[axis] - 1)
+            place = np.clip(np.searchsorted(nodes, q[axis], side="right") - 1, 0, self.grid.shape[axis] - 1)
+            flat = flat * self.grid.shape[axis] + place
+            within[axis] = (q[axis] - nodes[place]) / np.diff(nodes)[place] - 0.5
         flat[outside] = -1
-        return flat
+        return flat, within
 
 
 def inside(grid: Grid, q: Array) -> NDArray[np.bool_]:

@@ -37,6 +37,8 @@ _TRAIL = 6  # points that are extrapolated from
 _ASTRAY = 0.3  # of a cell: largest difference between that and the chord step
 _POLAR = 4.0  # within so many cells of a pole steps are taken in the plane of the ring
 _BLOCK = 64  # points whose tangents are done together
+_LEAST_RING = 3  # cells
+_CLOSED = 1e-9  # of the size of the grid: a line whose ends are nearer than this is a ring
 _ROUND_OFF = 1e-15  # of the size of the grid: no residual is expected below it
 _ON_POLE = 1e-6  # of the first cell: nearer to a pole tangents are taken at this distance, where they are finite
 
@@ -53,6 +55,7 @@ class NewtonInverse:
     """
 
     def __init__(self, grid: Grid) -> None:
+        _refuse_coarse_rings(grid)
         self.spline = grid.map.spline if isinstance(grid.map, TabulatedMap) else _spline_of(grid)
         self._starts = _Starts.of(self.spline)
         rings = [-1 if ring is None or not grid.periodic[ring] else ring for ring in grid.ring_axis]
@@ -119,6 +122,20 @@ class NewtonInverse:
         spline = (*self.spline.table, self.spline.coefficients.reshape(-1), self.spline.strides)
         stop = (_ROUND_OFF * self._starts.size, last_step)
         _newton(x, tangents, np.ascontiguousarray(start), chained, spline, self._frame, stop, q, dq, state)
+
+
+def _refuse_coarse_rings(grid: Grid) -> None:
+    """Refuse rings of so few cells that the spline of their nodes is no ring."""
+    for axis, (seam, n) in enumerate(zip(grid.periodic, grid.shape, strict=True)):
+        if seam and n < _LEAST_RING:
+            q = [np.full(2, 0.5 * (nodes[0] + nodes[-1])) for nodes in grid.nodes]
+            q[axis] = grid.nodes[axis][[0, -1]]
+            x = np.stack(grid.map.to_cartesian(q[0], q[1], q[2]))
+            if np.ptp(x, axis=1).max() < _CLOSED * np.abs(x).max():
+                raise GridError(
+                    f"{grid!r}: {n} cells round {grid.map.names[axis]}, expected at least {_LEAST_RING} to find "
+                    "coordinates of points in a grid without closed form"
+                )
 
 
 def _spline_of(grid: Grid) -> PositionSpline:

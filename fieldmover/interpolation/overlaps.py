@@ -105,7 +105,20 @@ def overlaps(view: View, block: Block, volumes: Array, chosen: Flags | None = No
         cell, part = np.empty(capacity, dtype=np.uint32), np.empty(capacity, dtype=np.float32)
         offset = np.empty((capacity, 3), dtype=np.int16)
         count = _overlaps(
-            x, corners, volume, chosen, own, view.shape, *view.closure, start, cell, part, offset, reach, irregular
+            x,
+            corners,
+            volume,
+            chosen,
+            own,
+            view.aligned,
+            view.shape,
+            *view.closure,
+            start,
+            cell,
+            part,
+            offset,
+            reach,
+            irregular,
         )
         if count <= capacity:
             break
@@ -205,7 +218,9 @@ def _tangents(p, a, b, e, t):
 
 
 @compute.kernel
-def _overlaps(x, xi, volume, chosen, own, shape, turns, rings, ends, start, cell, part, offset, reach, irregular):
+def _overlaps(
+    x, xi, volume, chosen, own, aligned, shape, turns, rings, ends, start, cell, part, offset, reach, irregular
+):
     """Overlaps of the cells of a slab; the number of overlaps, of which only as many are stored as there is room."""
     c, p, y = np.empty((8, 3)), np.empty((8, 3)), np.empty((8, 3))
     t = np.empty((3, 3))
@@ -254,8 +269,10 @@ def _overlaps(x, xi, volume, chosen, own, shape, turns, rings, ends, start, cell
                         c[n, d] = x[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
                 _polynomial(c, y)
                 if not _regular(p, y, volume[i, j, k], t, c):
-                    irregular[i, j, k] = True
-                    continue
+                    irregular[i, j, k] = not aligned
+                    if not aligned:
+                        continue
+                    c[0, 0], c[1, 0], c[2, 0], c[3, 0] = 1.0, 0.0, 0.0, 0.0
                 if outside:
                     continue
                 _tangents(p, 0.5, 0.5, 0.5, t)

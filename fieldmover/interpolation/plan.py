@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import EdgePotential, FaceFlux, Three, close_edges
 from fieldmover.grids.grid import Grid, at
-from fieldmover.interpolation.aligned import Aligned, same_coordinates
+from fieldmover.interpolation.aligned import Aligned, nodes_in
 from fieldmover.interpolation.coverage import Outside, fill, known_faces
 from fieldmover.interpolation.limited import move_limited
 from fieldmover.interpolation.plan_across import Across
@@ -68,7 +68,7 @@ class FluxPlan:
         if order not in get_args(Order):
             raise FieldError(f"order: {order!r}, expected one of {', '.join(map(repr, get_args(Order)))}")
         self.source, self.target, self.order = source, target, order
-        self._way = (Aligned if same_coordinates(source, target) else Across)(source, target)
+        self._way = (Across if nodes_in(source, target) is None else Aligned)(source, target)
 
     @property
     def nbytes(self) -> int:

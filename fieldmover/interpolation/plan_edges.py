@@ -74,6 +74,7 @@ def _by_points(
     where = (np.arange(pieces)[:, None] + 0.5 * (1.0 + abscissae)).ravel() / pieces
     position, tangent = edges.at_parts(where)
     q, dq = locator.pull_back(position.reshape(3, -1), tangent.reshape(3, 1, -1))
+    locator.close(q)
     q[:, ~inside(spline.grid, q)] = np.nan
     rates = (spline.covectors(q) * dq[:, 0]).sum(axis=0).reshape(-1, where.size)
     needed = _pieces(spline.grid, allowed, q.reshape(3, -1, where.size), where[-1] - where[0])
@@ -87,6 +88,7 @@ def _by_lines(
     where = np.linspace(0.0, 1.0, 2 * pieces + 1)
     position, _ = edges.at_parts(where)
     q = locator.coordinates(position.reshape(3, -1))
+    locator.close(q)
     q[:, ~inside(spline.grid, q)] = np.nan
     q = q.reshape(3, -1, where.size)
     begin, end = q[:, :, :-1].reshape(3, -1), q[:, :, 1:].reshape(3, -1)

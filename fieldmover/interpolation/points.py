@@ -91,6 +91,7 @@ def move_points(
         q = centres[0][rows, None, None], centres[1][None, :, None], centres[2][None, None, :]
         x = np.stack(target.map.to_cartesian(*q))
         place = locator.coordinates(x.reshape(3, -1))
+        locator.close(place)
         here = inside(source, place)
         known[rows] = here.reshape(x.shape[1:])
         place = place[:, here]

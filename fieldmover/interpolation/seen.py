@@ -6,12 +6,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
+from fieldmover.interpolation.aligned import azimuth_of
 from fieldmover.interpolation.overlaps import TINY, TURN, corner_coordinates
+from fieldmover.interpolation.parcels import parcels
 from fieldmover.interpolation.view import Block, View
 
 Array = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
+_WIDE = 2.0  # radians
 _FINEST = 16  # parcels along an axis of a source cell
 
 
@@ -27,7 +30,7 @@ def seen(view: View, marked: Flags) -> tuple[Flags, Flags, NDArray[np.int8]]:
     Returns
     -------
     whole : ndarray of bool, shape of the grid
-        All eight corners are inside.
+        All eight corners are inside; of cells of more than 2 radians of azimuth, all parcels.
     near : ndarray of bool
         The cell may touch one of the `marked` cells.
     split : ndarray of int8, shape (n1, n2, n3, 3)
@@ -50,6 +53,14 @@ def seen(view: View, marked: Flags) -> tuple[Flags, Flags, NDArray[np.int8]]:
         _seen(eta, view.shape, *view.closure, table, whole[block], near[block], split[block])
 
     compute.for_each(work, view.blocks)
+    ring = azimuth_of(view.grid)
+    if ring is not None and not view.aligned and np.diff(view.grid.nodes[ring]).max() > _WIDE:
+        split[..., ring] = _FINEST  # its corners say little of where such a cell is
+        near[...] = marked.any()
+        cells = np.flatnonzero(whole)
+        _, giver, _, _ = parcels(view, cells, split.reshape(-1, 3)[cells], view.grid.cell_volumes())
+        number = np.bincount(giver, minlength=whole.size)
+        whole &= number.reshape(whole.shape) == split.prod(axis=-1, dtype=np.int64)
     return whole, near, split
 
 
@@ -113,6 +124,6 @@ def _seen(eta, shape, turns, rings, ends, table, whole, near, split):
                                 if span > widest:
                                     widest = span
                     parts = 1
-                    while parts < 2 * widest and parts < _FINEST:
+                    while parts < 4 * widest and parts < _FINEST:
                         parts *= 2
                     split[i, j, k, d] = parts

@@ -6,12 +6,14 @@ difference, the mean distance of a parabola from its chord, which makes volumes 
 
 from __future__ import annotations
 
+from functools import cached_property
+
 import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.grids.grid import Grid
-from fieldmover.interpolation.aligned import same_coordinates
+from fieldmover.interpolation.aligned import nodes_in
 from fieldmover.interpolation.locate import Locator
 
 Array = NDArray[np.float64]
@@ -21,6 +23,7 @@ ON_POLE = 1e-4
 """A corner this part of a cell from a pole has no azimuth."""
 
 _BLOCK = 32  # cells a side: what a block touches in the other grid stays in the second-level cache
+_NEVER = 1e30  # a turn that no cell makes
 _LARGEST_SHIFT = 0.1  # of a cell: larger ones are no curvature but lead across a pole
 
 
@@ -37,6 +40,8 @@ class View:
         The cells of `grid`, cut into blocks.
     shape : ndarray of int64
         Of `onto`.
+    aligned : bool
+        Whether both grids are in the same coordinates, see `nodes_in`.
     closure : tuple of three ndarrays
         Of `onto`, for each axis: cells round a seam (0 without), the axis of the ring that shrinks at its poles (-1
         without), whether its low and high ends are poles.
@@ -45,9 +50,14 @@ class View:
     def __init__(self, grid: Grid, onto: Grid) -> None:
         self.grid, self.onto = grid, onto
         self.shape = np.array(onto.shape, dtype=np.int64)
-        self.locator = Locator(onto)
-        turns = [float(n) if seam else 0.0 for n, seam in zip(onto.shape, onto.periodic, strict=True)]
-        rings = [-1 if ring is None else ring for ring in onto.ring_axis]
+        self._own = nodes_in(onto, grid)
+        self.aligned = self._own is not None
+        # In the same coordinates nothing has to be made continuous: no corner is without azimuth, no turn too long.
+        turns = [
+            0.0 if not seam else _NEVER if self.aligned else float(n)
+            for n, seam in zip(onto.shape, onto.periodic, strict=True)
+        ]
+        rings = [-1 if ring is None or self.aligned else ring for ring in onto.ring_axis]
         ends = [[pole in ("low", "both"), pole in ("high", "both")] for pole in onto.poles]
         self.closure = (np.array(turns), np.array(rings, dtype=np.int64), np.array(ends))
         self.blocks = [
@@ -57,21 +67,36 @@ class View:
             for three in compute.slabs(grid.shape[2], _BLOCK)
         ]
 
+    @cached_property
+    def locator(self) -> Locator:
+        return Locator(self.onto)
+
     def nodes(self, block: Block, margin: int) -> tuple[Array, Array, list[int]]:
         """Positions and index coordinates of the nodes of a block, with up to `margin` more all round."""
         first = [max(part.start - margin, 0) for part in block]
-        q1, q2, q3 = (
-            nodes[begin : part.stop + 1 + margin]
-            for nodes, begin, part in zip(self.grid.nodes, first, block, strict=True)
-        )
+        here = [slice(begin, part.stop + 1 + margin) for begin, part in zip(first, block, strict=True)]
+        q1, q2, q3 = (nodes[part] for nodes, part in zip(self.grid.nodes, here, strict=True))
         x = np.stack(self.grid.map.to_cartesian(q1[:, None, None], q2[None, :, None], q3[None, None, :]))
-        if same_coordinates(self.grid, self.onto):  # exactly: cells of one grid may be parts of those of the other
-            same = np.broadcast_arrays(q1[:, None, None], q2[None, :, None], q3[None, None, :])
-            xi = np.stack(same).reshape(3, -1)
+        if self._own is not None:  # exactly: cells of one grid may be parts of those of the other
+            same = (nodes[part] for nodes, part in zip(self._own, here, strict=True))
+            xi = np.stack(np.meshgrid(*same, indexing="ij")).reshape(3, -1)
         else:
             xi = self.locator.coordinates(x.reshape(3, -1))
+        turns = [self._turns(axis, xi[axis]) for axis in range(3)]
         _to_index(xi, *self.onto.nodes)
+        for axis, turn in enumerate(turns):
+            xi[axis] += turn * self.shape[axis]
         return x, xi.reshape(x.shape), [part.start - begin for part, begin in zip(block, first, strict=True)]
+
+    def _turns(self, axis: int, q: Array) -> Array | float:
+        """Bring coordinates between the ends of a seam, in place; by how many turns."""
+        nodes = self.onto.nodes[axis]
+        if not self.onto.periodic[axis]:
+            return 0.0
+        span, beyond = nodes[-1] - nodes[0], (q < nodes[0]) | (q > nodes[-1])
+        turns = np.where(beyond, np.floor((q - nodes[0]) / span), 0.0)
+        q -= turns * span
+        return turns
 
     def _lost(self, xi: Array) -> NDArray[np.int64]:
         """For each node the axis whose coordinate means nothing because the node lies on a pole; -1 elsewhere."""
@@ -86,6 +111,9 @@ class View:
 
     def corners(self, block: Block) -> tuple[Array, Array]:
         """Positions and straightened index coordinates of the corners of the cells of a block, (3, m1, m2, m3) each."""
+        if self.aligned:
+            x, xi, _ = self.nodes(block, 0)
+            return x, xi
         x, xi, first = self.nodes(block, 1)
         shape = [part.stop - part.start + 1 for part in block]
         straight = np.empty((3, *shape))
