@@ -322,6 +322,8 @@ def test_the_metric_of_a_file(run):
         'velocity = { data = ["/vx", "/vy", "/vz"], kind = "W eulerian" }',
         target=f'kind = "cartesian"\nnodes = {BOX}\nfile = "in.h5"\n[target.metric]\ngamma = {names}',
     ).replace(f'nodes = {BOX}\nfile = "in.h5"', 'nodes = ["/x", "/x", "/x"]\nfile = "in.h5"')
+    in_flux = 'unit = 1\nbasis = "coordinate"\ndensitised = true\n[target.fluid]'
+    text = text.replace("unit = 1\n[target.fluid]", in_flux)
     found, report = run(text, {**uniform(v1=0.3, v2=0.0, v3=0.0, **gamma), "x": np.linspace(-1, 1, 9)})
     lorentz = 1 / np.sqrt(1 - 4 * 0.09)
     # Proper volume 8 x 8, B^2 = 4 times the sum of squares of B^i.
@@ -329,6 +331,7 @@ def test_the_metric_of_a_file(run):
     assert np.allclose([part["energy"] for part in report["curved"].values()], energy, rtol=1e-9)
     assert np.allclose(found["vx"], 0.3 * lorentz, rtol=1e-12)
     assert np.allclose(found["rho"], 2.0 * 8 * lorentz, rtol=1e-12)
+    assert np.allclose(found["bx"], 0.3 * 8, rtol=1e-12)
 
 
 @pytest.mark.parametrize(

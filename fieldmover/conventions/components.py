@@ -149,6 +149,8 @@ def _tangents(grid: Grid, basis: Basis) -> Array:
 
 def _face_measures(grid: Grid, basis: Basis, densitised: bool, metric: Metric | None) -> Three:
     """What a stored component is multiplied by on every face."""
+    if isinstance(metric, FlatMetric):
+        metric = None  # the grid's own measures are those of flat space
     if metric is not None and basis != "coordinate" and grid.kind != "cartesian":
         raise FieldError(
             f"{basis} components on faces of a {grid.kind} grid in curved space: expected coordinate components"

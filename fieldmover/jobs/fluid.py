@@ -52,12 +52,23 @@ def move_fluid(
     """
     moved = _Moved(job, source, space, plan)
     fluid = {name: moved.quantity(name) for name in _to_move(job, space)}
-    values = Values(fluid, flux)
+    return with_formulas(job, fluid, flux), moved.angular
+
+
+def with_formulas(job: Job, fluid: dict[str, Array], flux: FaceFlux) -> dict[str, Array]:
+    """What the target holds, from quantities on its grid: some of them, those made of them by formulas, the velocity.
+
+    Raises
+    ------
+    JobError
+        If a value of a formula is not finite.
+    """
+    values, made = Values(fluid, flux), dict(fluid)
     for name, wanted in job.target.fluid.items():
         if wanted.formula is not None:
-            fluid[name] = evaluated(Expression(wanted.formula, values.names), values, f"target.fluid.{name}")
-    kept = [*job.target.fluid, *([VELOCITY] if VELOCITY in fluid else [])]
-    return {name: fluid[name] for name in dict.fromkeys(kept)}, moved.angular
+            made[name] = evaluated(Expression(wanted.formula, values.names), values, f"target.fluid.{name}")
+    kept = [*job.target.fluid, *([VELOCITY] if VELOCITY in made else [])]
+    return {name: made[name] for name in dict.fromkeys(kept)}
 
 
 def totals(
@@ -146,7 +157,10 @@ class _Moved:
             shape = self._plan.target.shape
             parts = [background(value, self._plan.target, where) for value in wanted.outside]
             return np.stack([np.broadcast_to(part, shape) for part in parts])
-        return background(wanted.outside, self._plan.target, where)
+        found = background(wanted.outside, self._plan.target, where)
+        if self._job.source.fluid[name].carry == "conserve" and (least := float(np.min(found))) < 0:
+            raise JobError(f"{where}: falls to {least:.6g}; a density is not negative")
+        return found
 
     def content(self, name: str) -> Array:
         """Content of a density in each target cell."""

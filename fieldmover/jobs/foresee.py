@@ -5,10 +5,12 @@ from __future__ import annotations
 import math
 from pathlib import Path
 
+from fieldmover.jobs.boxes import target_of
 from fieldmover.jobs.grids import target_grid
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.read import source_datasets
-from fieldmover.jobs.run import check_output, report_folder
+from fieldmover.jobs.record import Record
+from fieldmover.jobs.run import check_cleaning, check_output, report_folder, total_bytes, wishes
 from fieldmover.jobs.store import bytes_needed
 from fieldmover.report.formats import table
 from fieldmover.report.write import FILES, check_folder
@@ -41,8 +43,19 @@ def foresee(loaded: Loaded, command: str, folder: Path | None = None, overwrite:
     writes = command != "check"
     folder = folder or report_folder(loaded, "report" if writes else "check")
     check_folder(folder)
+    if command == "clean":
+        check_cleaning(loaded)
+    if writes:
+        check_output(loaded, overwrite)
+    Record(loaded, command)  # a report to compare with that is none is told
     source, datasets = source_datasets(loaded)
-    target = source if loaded.job.target.grid is None and command != "move" else target_grid(loaded)
+    target, size = source, bytes_needed(loaded, source.shape)
+    if loaded.job.target.grid is not None or command == "move":
+        whole = target_of(loaded, target_grid(loaded))
+        target, size = whole.grid, total_bytes(loaded, whole)
+    if writes:
+        check_space(loaded.target, size)
+    wishes(loaded, target if writes or loaded.target.exists() else source, folder)
     cells, others = math.prod(source.shape), math.prod(target.shape)
     lines = [
         f"reads {loaded.source}",
@@ -50,10 +63,8 @@ def foresee(loaded: Loaded, command: str, folder: Path | None = None, overwrite:
     ]
     lines.append(f"on {source!r}")
     if writes:
-        check_output(loaded, overwrite)
-        check_space(loaded.target, bytes_needed(loaded, target.shape))
         verb = "replaces" if loaded.target.exists() else "writes"
-        lines.append(f"{verb} {loaded.target}, about {bytes_needed(loaded, target.shape) / 1e6:.1f} MB on {target!r}")
+        lines.append(f"{verb} {loaded.target}, about {size / 1e6:.1f} MB on {target!r}")
         if loaded.job.target.view:
             lines.append(f"{verb} {sidecar(loaded.target)}")
     elif loaded.target.exists():

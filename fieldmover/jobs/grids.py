@@ -280,7 +280,7 @@ def _function(loaded: Loaded, side: Side, parameters: Mapping[str, float]) -> Fu
     if chosen is None or chosen.python is None:
         return crowded_map(**_crowding(loaded, side, parameters))
     file, _, name = chosen.python.rpartition(":")
-    own = load_map(Path(loaded.path.parent, file), name, parameters)
+    own = _told(load_map(Path(loaded.path.parent, file), name, parameters), chosen.python)
     size = ratio(loaded.job, "length") if side == "source" else 1.0
     if size == 1.0:
         return own
@@ -290,6 +290,18 @@ def _function(loaded: Loaded, side: Side, parameters: Mapping[str, float]) -> Fu
         return size * x, size * y, size * z
 
     return scaled
+
+
+def _told(function: Function, name: str) -> Function:
+    """A function of the user's whose mistakes are told as such."""
+
+    def called(q1: Array, q2: Array, q3: Array) -> tuple[Array, Array, Array]:
+        try:
+            return function(q1, q2, q3)
+        except Exception as error:
+            raise JobError(f"map: {name} fails: {type(error).__name__}: {error}") from error
+
+    return called
 
 
 def _crowding(loaded: Loaded, side: Side, parameters: Mapping[str, float]) -> dict[str, float]:

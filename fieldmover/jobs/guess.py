@@ -36,6 +36,8 @@ BASES = {
 }
 SCALARS = {"density": r"rho|dens|density|d"}
 GHOSTS = r"n?_?(?:ghosts?|ghost_cells|ghost_zones|nghost|ng|nguard|guard|halo)"
+USUAL = ("q1 q2 q3", "q3 q2 q1")
+"""Orders of axes that most codes have; the first is taken where shapes allow several."""
 MOST_GHOSTS = 8
 VIEW = "/VTKHDF/"
 """What viewers see, a copy of what lies elsewhere."""
@@ -219,6 +221,7 @@ def _layout(found: Guess, shapes: list[tuple[int, ...]], lengths: list[int]) -> 
         found.say("layout", "guess", f"shapes {shapes} do not fit positions of {lengths} values")
         return
     best = [fit for fit in fits if fit[0] == min(fits)[0]]  # the fewest ghosts, as many on each axis
+    best.sort(key=lambda fit: fit[1] not in USUAL)
     _, found.order, found.at, found.centres, found.ghosts = best[0]
     orders = list(dict.fromkeys(fit[1] for fit in best))
     shown = ", ".join(dict.fromkeys(map(str, shapes)))

@@ -66,7 +66,7 @@ def load(path: Path, changes: Sequence[str] = ()) -> Loaded:
         lines.
     """
     try:
-        text = path.read_text(encoding="utf-8")
+        text = path.read_text(encoding="utf-8-sig")
         values = tomllib.loads(text)
     except OSError as error:
         raise JobError(f"{path}: {(error.strerror or str(error)).lower()}") from None
@@ -95,8 +95,8 @@ def _apply(values: dict[str, Any], change: str) -> Place:
     if not equals or not all(parts):
         raise JobError(f"--set {change}: expected key=value, for example target.precision='\"single\"'")
     try:
-        new = tomllib.loads(f"value = {value}")["value"]
-    except tomllib.TOMLDecodeError:
+        (new,) = tomllib.loads(f"value = {value}").values()  # more than one: lines of a whole file
+    except ValueError:
         raise JobError(f"--set {change}: {value!r} is not a TOML value; text needs quotes: {key}='\"...\"'") from None
     table = values
     for part in parts[:-1]:

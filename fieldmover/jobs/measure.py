@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from scipy.ndimage import binary_erosion
 
 from fieldmover.diagnostics import Surface, compare_fields, differences, stencil_divergence
-from fieldmover.errors import FieldError, GridError, JobError
+from fieldmover.errors import DataError, FieldError, GridError, JobError
 from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.fluid import FluidPlan
 from fieldmover.jobs.details import helicity_figures
@@ -24,6 +24,7 @@ from fieldmover.jobs.names import STRENGTH
 from fieldmover.jobs.read import State, read_target, target_space
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import surface_figures
+from fieldmover.jobs.schema import plain
 from fieldmover.jobs.space import Space
 
 Array = NDArray[np.float64]
@@ -62,7 +63,7 @@ def measure_more(record: Record, loaded: Loaded, states: Mapping[str, State], su
 
 def cell_values(state: State, density: Array) -> dict[str, Array]:
     """What formulas of regions may use of a state: strength, from the energy density, and scalar quantities."""
-    scalars = {name: values for name, values in state.fluid.items() if values.ndim == 3}
+    scalars = {plain(name): values for name, values in state.fluid.items() if values.ndim == 3}
     return {STRENGTH: np.sqrt(2.0 * density), **scalars}
 
 
@@ -129,8 +130,17 @@ def other_state(loaded: Loaded, space: Space, path: Path) -> State:
 def measure_against(
     record: Record, loaded: Loaded, other: State, stored: State, surfaces: Mapping[str, Surface]
 ) -> None:
-    """The target against another state: the fields where the grids overlap, and all figures of each."""
-    record.against(other.flux, stored.flux)
+    """The target against another state: the fields where the grids overlap, and all figures of each.
+
+    Raises
+    ------
+    DataError
+        If they do not overlap.
+    """
+    try:
+        record.against(other.flux, stored.flux)
+    except FieldError as error:
+        raise DataError(f"{other.path}: {error}") from None
     found = differences(*(_figures(loaded, state, surfaces) for state in (other, stored)))
     record.values["against"]["figures"].update({name: vars(difference) for name, difference in found.items()})
 

@@ -96,7 +96,7 @@ def read_source(loaded: Loaded) -> State:
 
 
 def source_datasets(loaded: Loaded) -> tuple[Grid, dict[str, int]]:
-    """The grid of the snapshot, and the bytes of every dataset that the job reads; fields are not read.
+    """The grid of the snapshot, and the bytes of every dataset that the job reads; of fields only shapes are looked at.
 
     Raises
     ------
@@ -104,15 +104,20 @@ def source_datasets(loaded: Loaded) -> tuple[Grid, dict[str, int]]:
         As in `read_source`.
     """
     source = loaded.job.source
-    names = [*source.grid.datasets, *source.magnetic.data]
+    in_cells: list[str] = []
     for quantity in source.fluid.values():
-        names += [quantity.data] if isinstance(quantity.data, str) else quantity.data or []
+        in_cells += [quantity.data] if isinstance(quantity.data, str) else quantity.data or []
     if source.metric is not None:
-        names += [*([source.metric.lapse] if source.metric.lapse else []), *(source.metric.shift or [])]
-        names += source.metric.gamma or []
+        in_cells += [*([source.metric.lapse] if source.metric.lapse else []), *(source.metric.shift or [])]
+        in_cells += source.metric.gamma or []
+    names, layout = [*source.grid.datasets, *source.magnetic.data, *in_cells], _layout(source)
     with Snapshot(loaded.source) as snapshot:
-        part = source_grid(loaded, snapshot, _layout(source))
+        part = source_grid(loaded, snapshot, layout)
         grid = at_place(Completed(part, source.grid.symmetry).grid, source.grid.place)
+        for component, name in enumerate(source.magnetic.data):
+            layout.check_shape(snapshot, name, part.shape, source.magnetic.at, component)
+        for name in in_cells:
+            layout.check_shape(snapshot, name, part.shape, "cells")
         return grid, {name: snapshot.size(name) for name in names}
 
 

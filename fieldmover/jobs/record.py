@@ -188,8 +188,9 @@ def _conventions(loaded: Loaded) -> dict[str, Any]:
     """How the numbers of both files are understood: what a reader must agree with first."""
     job = loaded.job
     sides: dict[str, Any] = {"source": job.source, "target": job.target}
+    whose = "the snapshot" if job.units is None else "the receiving code"
     found: dict[str, Any] = {
-        "inside": "Heaviside-Lorentz: the energy density is B^2 / 2; lengths, masses and times of the snapshot",
+        "inside": f"Heaviside-Lorentz: the energy density is B^2 / 2; lengths, masses and times of {whose}",
         "moved by": job.move.model_dump(),
     }
     for side, table in sides.items():

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
@@ -29,7 +30,7 @@ from fieldmover.jobs.boxes import (
 )
 from fieldmover.jobs.cleaning import cleaned, perturbed_flux
 from fieldmover.jobs.details import divergences, profile, spectra
-from fieldmover.jobs.fluid import move_fluid, totals
+from fieldmover.jobs.fluid import move_fluid, totals, with_formulas
 from fieldmover.jobs.grids import groups_of, target_grid
 from fieldmover.jobs.health import cured, mass_added, stored_cures
 from fieldmover.jobs.load import Loaded
@@ -45,6 +46,7 @@ from fieldmover.jobs.progress import Progress
 from fieldmover.jobs.read import State, read_cells, read_source, read_target
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import Cells, by_place, region_figures, region_masks, surfaces_of
+from fieldmover.jobs.schema import Move, Within
 from fieldmover.jobs.store import Store, bytes_needed
 from fieldmover.jobs.supervise import note
 from fieldmover.jobs.verdicts import limits_table
@@ -103,7 +105,7 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
     """
     target = target_of(loaded, target_grid(loaded))
     check_output(loaded, overwrite)
-    check_space(loaded.target, _bytes_needed(loaded, target))
+    check_space(loaded.target, total_bytes(loaded, target))
     work = _work(loaded, "move", target.grid, folder, Progress(7, quiet))
     job, record, progress = loaded.job, work.record, work.progress
     with compiling_fluid():
@@ -112,17 +114,24 @@ def move(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, qu
         with progress.stage("cleaning"):
             clean_flux = cleaned(loaded, source.flux, record, job.move.clean, to_move=True)
             record.field("cleaned", clean_flux)
-        clean_flux = perturbed_flux(loaded, clean_flux, record)
+        changed_flux = perturbed_flux(loaded, clean_flux, record)
         with progress.stage("moving the field"):
-            flux, more = move_field(loaded, clean_flux, target, record)
+            flux, more = move_field(loaded, changed_flux, target, record)
             record.field("moved", flux)
     with progress.stage("moving the fluid"):
         plans, finer = boxes_beside(loaded, source, target, more)
+        if not plans[0].coverage.any():
+            raise JobError(
+                f"{loaded.path}: target.grid: {target.grid!r} has no cell that the source reaches, {source.grid!r}; "
+                "expected them to overlap, in one unit of length"
+            )
         fluid, angular = move_fluid(job, source, target.space, plans[0], flux)
         record.values["angular_momentum"] = None if angular is None else angular.as_dict()
         moved, record.values["health"] = cured(loaded, State(loaded.target, flux, target.space, fluid, source.time))
         layers = None if target.ghosts is None else around(loaded, source, target, more[0])
     steps = {"cleaned": clean_flux, "moved": flux}
+    if changed_flux is not clean_flux:  # neither the cleaning's doing nor that of the move
+        steps = {"cleaned": clean_flux, "perturbed": changed_flux, "moved": flux}
     return _store(work, source, moved, plans[0], steps, overwrite, finer, layers)
 
 
@@ -142,8 +151,7 @@ def clean(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, q
         See `fieldmover.errors`.
     """
     job = loaded.job
-    if job.target.grid is not None:
-        raise JobError(f"{loaded.path}: target.grid: clean keeps the grid of the source; leave this table out")
+    check_cleaning(loaded)
     check_output(loaded, overwrite)
     check_folder(folder or report_folder(loaded))
     progress, record = Progress(5, quiet), Record(loaded, "clean")
@@ -155,7 +163,7 @@ def clean(loaded: Loaded, folder: Path | None = None, overwrite: bool = False, q
         flux = cleaned(loaded, source.flux, record, "always", to_move=False)
         record.field("cleaned", flux)
         plan = FluidPlan(source.grid, source.grid)
-        fluid = {name: source.fluid[name] for name in job.target.fluid}
+        fluid = with_formulas(job, source.fluid, flux)
         state, record.values["health"] = cured(loaded, State(loaded.target, flux, source.space, fluid, source.time))
     return _store(work, source, state, plan, {"cleaned": flux}, overwrite)
 
@@ -189,6 +197,8 @@ def check(
     """
     folder = folder or report_folder(loaded, "check")
     check_folder(folder)
+    if make_limits is not None and not 0.0 <= make_limits < math.inf:
+        raise JobError(f"--make-limits {make_limits}: expected a margin like 0.1, which is 10 %")
     there = loaded.target.exists()
     if against is not None and not there:
         raise JobError(f"{loaded.target}: no such file; there is nothing to compare with {against}")
@@ -219,13 +229,15 @@ def check(
     outcome = _finish(work, source, stored if there else None)
     if make_limits is None:
         return outcome
-    path = folder / "limits.toml"
-    report = os.path.relpath(folder / "report.json", loaded.path.parent)  # as a job names files
-    write_text(path, limits_table(record.values, record.names, make_limits, report))
+    path, reference = folder / "limits.toml", folder / "reference.json"  # which later reports do not replace
+    write_text(reference, to_json(record.values))
+    named = os.path.relpath(reference, loaded.path.parent)  # as a job names files
+    write_text(path, limits_table(record.values, record.names, make_limits, named))
     return replace(outcome, text=f"{outcome.text}\nlimits: {path}")
 
 
-def _bytes_needed(loaded: Loaded, target: Target) -> int:
+def total_bytes(loaded: Loaded, target: Target) -> int:
+    """What the arrays of an output take on all its grids, roughly."""
     grids = [target.grid if target.ghosts is None else target.ghosts.whole, *target.finer]
     return sum(bytes_needed(loaded, grid.shape) for grid in grids)
 
@@ -235,13 +247,32 @@ def report_folder(loaded: Loaded, suffix: str = "report") -> Path:
     return loaded.target.with_name(f"{loaded.target.stem}-{suffix}")
 
 
+def check_cleaning(loaded: Loaded) -> None:
+    """Refuse a job for `clean` that wants something moved.
+
+    Raises
+    ------
+    JobError
+        If it has a target grid, or keys of move that would change more than the place of things.
+    """
+    if loaded.job.target.grid is not None:
+        raise JobError(f"{loaded.path}: target.grid: clean keeps the grid of the source; leave this table out")
+    for name in ("perturb", "keep", "blend", "net_flux"):
+        if getattr(loaded.job.move, name) != Move.model_fields[name].default:
+            raise JobError(f"{loaded.path}: move.{name}: clean moves nothing; leave this key out")
+
+
 def check_output(loaded: Loaded, overwrite: bool) -> None:
     """Refuse to lose a file before anything is read."""
-    source, target = loaded.source, loaded.target
+    target, grid = loaded.target, loaded.job.target.grid
+    inputs = {"the input": loaded.source, "the job file": loaded.path}
+    if grid is not None and grid.file is not None:
+        inputs["target.grid.file, which the grid is read from"] = loaded.path.parent / grid.file
     for path in (target, sidecar(target)) if loaded.job.target.view else (target,):
         if path.exists():
-            if source.exists() and path.samefile(source):
-                raise JobError(f"{path}: the output is the input")
+            for meaning, other in inputs.items():
+                if other.exists() and path.samefile(other):
+                    raise JobError(f"{path}: the output is {meaning}")
             if not overwrite:
                 raise JobError(f"{path}: exists; give --overwrite to replace it")
             if not path.is_file():
@@ -260,12 +291,30 @@ def _work(
 ) -> Work:
     """What the job wants to see on a grid; mistakes in it are told before the work."""
     folder = folder or report_folder(loaded)
+    planes, surfaces = wishes(loaded, grid, folder)
+    return Work(loaded, record or Record(loaded, command), progress, folder, planes, surfaces)
+
+
+def wishes(loaded: Loaded, grid: Grid, folder: Path) -> tuple[list[Plane], dict[str, Surface]]:
+    """Planes and surfaces that a job wants to see; what cannot be measured or reported on a grid is an error.
+
+    Raises
+    ------
+    JobError
+        If a region, a plane or a surface misses the grid, or the report would replace one it is compared with.
+    OutputError
+        If the folder of the report cannot be written.
+    """
     check_folder(folder)
-    region_masks(grid, by_place(loaded.job))  # one that misses the grid is told before the work
-    return Work(
-        loaded, record or Record(loaded, command), progress, folder, _planes(loaded, grid),
-        surfaces_of(loaded.job.surfaces, grid),
-    )  # fmt: skip
+    region_masks(grid, by_place(loaded.job))
+    own = (folder / "report.json").resolve()
+    for name, limit in loaded.job.limits.items():
+        if isinstance(limit, Within) and (loaded.path.parent / limit.of).resolve() == own:
+            raise JobError(
+                f"{loaded.path}: limits.{name}: this run would replace {limit.of}, which it is compared with; give "
+                "--report another folder, or keep the good report elsewhere"
+            )
+    return _planes(loaded, grid), surfaces_of(loaded.job.surfaces, grid)
 
 
 def _planes(loaded: Loaded, grid: Grid) -> list[Plane]:

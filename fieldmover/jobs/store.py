@@ -189,6 +189,12 @@ class Store:
         return np.ascontiguousarray(whole[inside], dtype=np.float64)
 
     def _write(self, name: str, array: Array, location: str, units: str) -> None:
+        largest, holds = float(np.abs(array).max()), np.finfo(self._type)
+        if largest > float(holds.max) or 0.0 < largest < float(holds.tiny):
+            raise JobError(
+                f"{self.loaded.path}: dataset {name!r}: values of up to {largest:.6g} do not fit into target.precision "
+                f'= "{self._target.precision}", which holds {holds.tiny:.2g} to {holds.max:.2g}; choose other units'
+            )
         stored = np.ascontiguousarray(self._layout.outside(array), dtype=self._type)
         attributes = {"units": units, "location": location, "axis_order": self._target.axes}
         self._output.write(name, stored, attributes)

@@ -40,12 +40,15 @@ def survey(path: Path, job: Path | None = None, overwrite: bool = False) -> str:
     DataError
         If the file cannot be read.
     JobError
-        If the job exists.
+        If the job exists, or is the file itself.
     OutputError
         If it cannot be written.
     """
-    if job is not None and job.exists() and not overwrite:
-        raise JobError(f"{job}: exists; give --overwrite to replace it")
+    if job is not None and job.exists():
+        if path.exists() and job.samefile(path):
+            raise JobError(f"{job}: the job would replace the file that is looked at; give it another name")
+        if not overwrite:
+            raise JobError(f"{job}: exists; give --overwrite to replace it")
     with Snapshot(path) as snapshot:
         items = snapshot.contents()
 
@@ -56,7 +59,7 @@ def survey(path: Path, job: Path | None = None, overwrite: bool = False) -> str:
 
         found = guess(items, read)
     lines = [f"{path}: {len(items)} datasets and numbers", "", _listing(items), ""]
-    lines += [f"{what} ({sure}): {why}" for what, sure, why in found.reasons]
+    lines += [f"{what} ({sure}): {_printable(why)}" for what, sure, why in found.reasons]
     if job is None:
         lines += ["", "give --job JOB.toml to write a job to start from"]
     else:
@@ -109,7 +112,7 @@ def _quoted(text: str) -> str:
 
 
 def _printable(text: str) -> str:
-    """Text that stays within a comment, whatever datasets are called."""
+    """Text that stays within a line, and does nothing to a terminal, whatever datasets are called."""
     return "".join(c if c.isprintable() else "?" for c in text)
 
 
@@ -120,7 +123,7 @@ def _list(names: list[str] | tuple[str, ...]) -> str:
 def _listing(items: list[Item]) -> str:
     rows = [
         (
-            item.name,
+            _printable(item.name),
             " x ".join(map(str, item.shape)) or "1",
             item.type,
             f"refused: {item.refused}" if item.refused else "",

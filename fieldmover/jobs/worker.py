@@ -11,7 +11,7 @@ from dataclasses import asdict, dataclass
 from pathlib import Path
 from types import FrameType
 
-from fieldmover.errors import FieldmoverError
+from fieldmover.errors import FieldmoverError, JobError, OutputError
 
 
 @dataclass(frozen=True)
@@ -70,6 +70,9 @@ def work(options: Options) -> int:
     except MemoryError as error:
         sys.stderr.write(f"fieldmover: not enough memory: {error}\n")
         return 7
+    except SystemExit as stop:
+        sys.stderr.write(f"fieldmover: a map's Python file asked to end: sys.exit({stop.code!r}); expected a map\n")
+        return JobError.exit_status
     except Exception:
         traceback.print_exc()
         sys.stderr.write("fieldmover: an error inside the program (above), not in the job\n")
@@ -116,8 +119,10 @@ def _run(options: Options) -> int:
 def _print(text: str) -> None:
     try:
         print(text, flush=True)
-    except BrokenPipeError:  # the reader has seen enough
+    except OSError as error:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        if not isinstance(error, BrokenPipeError):  # whose reader has seen enough
+            raise OutputError(f"stdout: cannot be written: {(error.strerror or str(error)).lower()}") from None
 
 
 def _stop(number: int, frame: FrameType | None) -> None:

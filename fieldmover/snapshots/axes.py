@@ -106,9 +106,35 @@ def snapped(nodes: NDArray[np.float64], meaning: Angle | None, slack: float) -> 
 
 
 def from_dataset(nodes: NDArray, meaning: Angle | None) -> NDArray[np.float64]:
-    """Node positions as float64, ends put right within the rounding of the type they were stored in."""
-    rounding = float(np.finfo(nodes.dtype).eps) if nodes.dtype.kind == "f" else 0.0
-    return snapped(nodes.astype(np.float64), meaning, 8 * np.pi * rounding)
+    """Node positions as float64, put right within the rounding of the type they were stored in.
+
+    Ends go where `snapped` puts them, and steps that differ by rounding alone become equal: a meridian that misses
+    its opposite by 1e-7 could not be joined to it across a pole.
+    """
+    rounding = _rounding(nodes)
+    return evened(snapped(nodes.astype(np.float64), meaning, 8 * np.pi * rounding), rounding)
+
+
+def _rounding(stored: NDArray) -> float:
+    """The relative rounding error of numbers as stored; 0 for whole numbers."""
+    return float(np.finfo(stored.dtype).eps) if stored.dtype.kind == "f" else 0.0
+
+
+def evened(nodes: NDArray[np.float64], rounding: float) -> NDArray[np.float64]:
+    """Nodes with equal steps if they are no further from them than the rounding error of single precision or worse.
+
+    Those in double precision are as they should be.
+
+    Examples
+    --------
+    >>> float(evened(np.array([0.0, 0.3333333, 0.6666667, 1.0]), 1.2e-7)[1])
+    0.3333333333333333
+    """
+    if rounding <= np.finfo(np.float64).eps:
+        return nodes
+    even = np.linspace(nodes[0], nodes[-1], len(nodes))
+    near = np.abs(nodes - even).max() <= rounding * np.abs(nodes).max()
+    return even if near else nodes
 
 
 def from_centres(centres: NDArray, ghosts: int, meaning: Angle | None) -> NDArray[np.float64]:
@@ -134,7 +160,7 @@ def from_centres(centres: NDArray, ghosts: int, meaning: Angle | None) -> NDArra
     >>> from_centres(np.array([0.5, 1.5, 2.5]), 0, None)
     array([0., 1., 2., 3.])
     """
-    c = centres.astype(np.float64)
+    c = evened(centres.astype(np.float64), _rounding(centres))
     if len(c) - 2 * ghosts < 1 or len(c) < 2:
         raise DataError(
             f"{len(c)} cell centres with {ghosts} ghosts at each end; expected at least 2 and one inside"

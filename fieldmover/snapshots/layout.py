@@ -73,6 +73,11 @@ class Layout:
             )
         extra = staggering(at, component)
         a, b, c = (found[self._axes.index(axis)] - extra[axis] for axis in range(3))
+        if any(n <= 2 * ghosts for n, ghosts in zip((a, b, c), self.ghosts, strict=True)):
+            raise DataError(
+                f"{snapshot.path}: dataset {name!r} has shape {found} ({self.order}); ghosts {list(self.ghosts)} at "
+                "each end leave no cell"
+            )
         return a, b, c
 
     def read(
@@ -98,8 +103,8 @@ class Layout:
         DataError
             If the shape does not fit or a value is NaN or infinite (how many, and the first place).
         """
+        self.check_shape(snapshot, name, cells, at, component)
         n1, n2, n3 = (n + extra for n, extra in zip(cells, staggering(at, component), strict=True))
-        self._check_shape(snapshot, name, (n1, n2, n3), at, component)
         inside = tuple(slice(self.ghosts[a], self.ghosts[a] + (n1, n2, n3)[a]) for a in self._axes)
         array = np.ascontiguousarray(self.inside(snapshot.read(name, inside)), dtype=np.float64)
         bad = ~np.isfinite(array)
@@ -119,7 +124,10 @@ class Layout:
         """An array [i1, i2, i3], turned to the order of the file (a view)."""
         return array.transpose(self._axes)
 
-    def _check_shape(self, snapshot: Snapshot, name: str, shape: Shape, at: Place, component: int) -> None:
+    def check_shape(self, snapshot: Snapshot, name: str, cells: Shape, at: Place, component: int = 0) -> None:
+        """Whether a dataset has the shape that `read` expects, with its arguments and errors; no value is read."""
+        n1, n2, n3 = (n + extra for n, extra in zip(cells, staggering(at, component), strict=True))
+        shape = (n1, n2, n3)
         found, expected = snapshot.shape(name), self.stored_shape(shape)
         if found == expected:
             return

@@ -15,10 +15,10 @@ from fieldmover.jobs.schema.gas import (
     formula,
 )
 from fieldmover.jobs.schema.grids import AnyGrid, Map, Placement, SourceGrid, Spaced, Symmetry, TargetGrid
-from fieldmover.jobs.schema.job import Job, Source
+from fieldmover.jobs.schema.job import Job, Move, Source
 from fieldmover.jobs.schema.measures import Region, Within
-from fieldmover.jobs.schema.mistakes import formula_names, mistakes, plain
-from fieldmover.jobs.schema.tables import TAGS
+from fieldmover.jobs.schema.mistakes import formula_names, mistakes
+from fieldmover.jobs.schema.tables import TAGS, plain
 
 __all__ = [
     "DIMENSIONS",
@@ -31,6 +31,7 @@ __all__ = [
     "Job",
     "Magnetic",
     "Map",
+    "Move",
     "Placement",
     "Region",
     "Source",

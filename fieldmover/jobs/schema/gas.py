@@ -4,13 +4,24 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, BeforeValidator, Field, model_validator
+from pydantic import AfterValidator, BeforeValidator, Discriminator, Field, Tag, model_validator
 
 from fieldmover.conventions.units import CodeUnits, code_units
 from fieldmover.errors import JobError
 from fieldmover.expressions import Expression
 from fieldmover.jobs.numbers import number
-from fieldmover.jobs.schema.tables import Basis, Components, Data, Dataset, Number, Sought, Table, Text, Three
+from fieldmover.jobs.schema.tables import (
+    Basis,
+    Components,
+    Data,
+    Dataset,
+    Number,
+    Sought,
+    Table,
+    Text,
+    Three,
+    sort_of_data,
+)
 
 MASS, VELOCITY, PRESSURE = "density", "velocity", "pressure"
 """Quantities that mean something to us: what weighs those carried by mass, what moves, what presses."""
@@ -93,7 +104,10 @@ class TargetQuantity(Table):
     basis: Basis | None = None
     kind: VelocityKind | None = None
     densitised: bool = False
-    outside: Background | Annotated[list[Background], Three] = 0.0
+    outside: Annotated[
+        Annotated[Background, Tag("scalar")] | Annotated[list[Background], Three, Tag("vector")],
+        Discriminator(sort_of_data),
+    ] = 0.0
 
     @property
     def vector(self) -> bool:
@@ -140,7 +154,10 @@ def _sizes(values: dict[str, float | str]) -> dict[str, float | str]:
 
 
 def _size(value: Any) -> Any:
-    return number(value) if isinstance(value, str) and value not in ("M_sun", "g", "kg") else value
+    try:
+        return number(value) if isinstance(value, str) else value
+    except ValueError:  # a name, of a unit or of nothing
+        return value
 
 
 SideUnits = Annotated[
@@ -195,6 +212,12 @@ class Axis(Table):
 
     centre: Annotated[list[Number], Three] = [0.0, 0.0, 0.0]
     direction: Annotated[list[Number], Three] = [0.0, 0.0, 1.0]
+
+    @model_validator(mode="after")
+    def _fits(self) -> Axis:
+        if not any(self.direction):
+            raise ValueError("direction: three zeros, expected an axis to turn about")
+        return self
 
 
 Rates = dict[str, Sought]

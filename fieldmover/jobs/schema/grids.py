@@ -80,6 +80,12 @@ class Turn(Table):
     about: Annotated[list[Number], Three] = Field(description="the axis to turn about, three numbers")
     angle: Number = Field(description='the angle, in radians or like "30 deg"')
 
+    @model_validator(mode="after")
+    def _fits(self) -> Turn:
+        if not any(self.about):
+            raise ValueError("about: three zeros, expected an axis to turn about")
+        return self
+
 
 class Placement(Table):
     """Where a grid's own frame lies in the common Cartesian one: turned, then moved."""

@@ -20,7 +20,7 @@ from fieldmover.jobs.schema.gas import (
 )
 from fieldmover.jobs.schema.grids import SourceGrid, TargetGrid
 from fieldmover.jobs.schema.measures import Limits, Region, Report, Through
-from fieldmover.jobs.schema.tables import AxisOrder, Number, Quantity, Sought, Table, Text, Three
+from fieldmover.jobs.schema.tables import AxisOrder, Number, Quantity, Sought, Table, Text, Three, plain
 
 
 class Source(Table):
@@ -100,5 +100,5 @@ class Job(Table):
 
     @property
     def scalars(self) -> list[str]:
-        """The scalar quantities of the target, which formulas of regions may use."""
-        return [name for name, quantity in self.target.fluid.items() if not quantity.vector]
+        """The scalar quantities of the target, as formulas of regions call them."""
+        return [plain(name) for name, quantity in self.target.fluid.items() if not quantity.vector]

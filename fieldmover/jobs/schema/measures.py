@@ -17,7 +17,7 @@ from fieldmover.jobs.schema.tables import Mistake, Number, Table, Text, Three, i
 
 
 def _sort_of_limit(value: Any) -> str:
-    if isinstance(value, AtLeast) or (isinstance(value, dict) and "at_least" in value):
+    if isinstance(value, AtLeast) or (isinstance(value, dict) and "at_least" in value and "within" not in value):
         return "lower"
     return "relative" if isinstance(value, dict | Within) else "absolute"
 
@@ -28,7 +28,9 @@ def _dotted(value: Any, prefix: str = "") -> Any:
         return value
     flat: dict[str, Any] = {}
     for key, entry in value.items():
-        group = isinstance(entry, dict) and not entry.keys() & {"within", "of", "at_least"}
+        group = isinstance(entry, dict) and all(
+            isinstance(part, dict) for name, part in entry.items() if name in ("within", "of", "at_least")
+        )
         flat.update(_dotted(entry, f"{prefix}{key}.") if group else {f"{prefix}{key}": entry})
     return flat
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable
+from itertools import product
 from pathlib import PurePath
 from typing import Any
 
@@ -20,7 +21,7 @@ from fieldmover.jobs.schema.gas import (
 )
 from fieldmover.jobs.schema.job import Job
 from fieldmover.jobs.schema.measures import among, region_mistakes
-from fieldmover.jobs.schema.tables import Basis, Mistake
+from fieldmover.jobs.schema.tables import Basis, Mistake, plain
 
 UNFIT = re.compile(r"[:<>&\"'\s]")
 """In the name of a file with a view: readers of XDMF take these for something else."""
@@ -42,11 +43,6 @@ def mistakes(job: Job) -> list[Mistake]:
         *region_mistakes(job.regions, job.scalars),
         *_limits(job),
     ]
-
-
-def plain(name: str) -> str:
-    """The name of a quantity in formulas: spaces and hyphens are not for them."""
-    return re.sub(r"[ -]", "_", name)
 
 
 def formula_names(quantities: dict[str, Any]) -> list[str]:
@@ -171,6 +167,7 @@ def _spaces(job: Job) -> list[Mistake]:
             found.append(((side, "fluid", VELOCITY, "kind"), told))
         if table.grid is not None and table.grid.kind == "kerr-schild" and job.metric is None:
             found.append(((side, "grid", "kind"), '"kerr-schild" needs [metric], for the spin'))
+        found += _in_curved_space(job, side, table)
         if table.metric is not None and job.units is not None:
             found.append(((side, "metric"), "arrays of a metric do not go with [units]; both files need the same"))
     if job.source.metric is not None and job.source.grid.symmetry is not None:
@@ -181,6 +178,26 @@ def _spaces(job: Job) -> list[Mistake]:
     if job.metric is None and any(own) and not all(own):
         side = "target" if own[0] else "source"
         found.append(((side,), f"one side has a metric; give {side}.metric too, or [metric] for both"))
+    return found
+
+
+def _in_curved_space(job: Job, side: str, table: Any) -> list[Mistake]:
+    """What only flat space, or a metric in closed form, settles."""
+    own = table.metric is not None and table.metric.gamma is not None
+    if not own and (job.metric is None or job.metric.name == "flat"):
+        return []
+    vectors = {"magnetic": table.magnetic.basis}
+    if (potential := getattr(table, "potential", None)) is not None:
+        vectors["potential"] = potential.basis
+    vectors |= {f"fluid.{name}": q.basis for name, q in table.fluid.items() if q.vector and name != VELOCITY}
+    told = 'unit vectors of the grid are not settled in curved space; give "coordinate" or "cartesian"'
+    found: list[Mistake] = [
+        ((side, *name.split(".", 1), "basis"), told) for name, basis in vectors.items() if basis == "physical"
+    ]
+    magnetic = table.magnetic
+    if own and magnetic.at == "faces" and not magnetic.densitised:
+        told = 'arrays of a metric are known in cells alone: give densitised = true with values at "faces"'
+        found.append(((side, "magnetic", "densitised"), told))
     return found
 
 
@@ -223,14 +240,21 @@ def _names(job: Job) -> list[Mistake]:
     for quantity, where in job.target.fluid.items():
         data = where.data if isinstance(where.data, list) else [where.data]
         names += [(("target", "fluid", quantity), name) for name in data]
+    finer = [] if job.target.grid is None else job.target.grid.finer
+    groups = ["", *(f"{box.group.strip('/')}/" for box in finer)]
     found: list[Mistake] = []
     seen: set[str] = set()
-    for place, name in names:
-        path = "/".join(part for part in name.split("/") if part)
+    for group, (place, name) in product(groups, names):
+        path, shown = group + name.strip("/"), f"/{group}{name.strip('/')}" if group else name
+        above = {"/".join(path.split("/")[:n]) for n in range(1, path.count("/") + 1)}
         if path in seen:
-            found.append((place, f"dataset {name!r} is named twice"))
+            found.append((place, f"dataset {shown!r} is named twice"))
+        elif over := above & seen or {other for other in seen if other.startswith(f"{path}/")}:
+            found.append((place, f"dataset {shown!r} and dataset {min(over)!r}: one cannot lie within the other"))
         if path.split("/")[0] == "fieldmover":
             found.append((place, f"{name!r}: the group /fieldmover is kept for the report"))
+        if job.target.view and path.split("/")[0] == "VTKHDF":
+            found.append((place, f"{name!r}: the group /VTKHDF is kept for the view"))
         seen.add(path)
     return found
 

@@ -2,10 +2,21 @@
 
 from __future__ import annotations
 
+import math
+import re
 from itertools import pairwise
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Field, StringConstraints, Tag
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Discriminator,
+    Field,
+    StringConstraints,
+    Tag,
+)
 
 from fieldmover.jobs.numbers import number
 
@@ -30,7 +41,7 @@ def sought(value: Any) -> Any:
 
 def unit_of(value: Any) -> Any:
     is_number = isinstance(value, int | float) and not isinstance(value, bool)
-    if value in UNITS or (is_number and value > 0):
+    if value in UNITS or (is_number and 0 < value < math.inf):
         return value
     raise ValueError(f'found {value!r}; give "gaussian", "heaviside-lorentz" or a number above 0')
 
@@ -42,6 +53,24 @@ def increasing(values: list[float]) -> list[float]:
     return values
 
 
+def name_of(value: str) -> str:
+    if not re.fullmatch(r"[A-Za-z][\w -]{,99}", value):
+        raise ValueError(f"found {value[:40]!r}; expected a name: a letter, then letters, digits, spaces, _ and -")
+    return value
+
+
+def plain(name: str) -> str:
+    """The name of a quantity in formulas: spaces and hyphens are not for them."""
+    return re.sub(r"[ -]", "_", name)
+
+
+def path_of_data(value: str) -> str:
+    parts = value.removeprefix("/").split("/")
+    if any(part in ("", ".") or re.search(r"[\s@]", part) for part in parts):
+        raise ValueError(f"found {value!r}; expected the path of a dataset like /state/rho, without spaces and @")
+    return value
+
+
 def sort_of_data(value: Any) -> str:
     return "vector" if isinstance(value, list) else "scalar"
 
@@ -51,11 +80,11 @@ Number = Annotated[float, BeforeValidator(from_text)]
 Sought = Annotated[float | str, BeforeValidator(sought)]
 """A number, or where the snapshot holds it."""
 Text = Annotated[str, StringConstraints(min_length=1, max_length=1000)]
-Dataset = Annotated[str, StringConstraints(pattern=r"^[^\s@]+$", max_length=1000)]
+Dataset = Annotated[str, StringConstraints(max_length=1000), AfterValidator(path_of_data)]
 Components = Annotated[list[Dataset], Three]
 Unit = Annotated[str | float, BeforeValidator(unit_of)]
 Data = Annotated[Annotated[Dataset, Tag("scalar")] | Annotated[Components, Tag("vector")], Discriminator(sort_of_data)]
-Quantity = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][\w -]*$", max_length=100)]
+Quantity = Annotated[str, AfterValidator(name_of)]
 
 
 class Table(BaseModel):
