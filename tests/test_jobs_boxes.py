@@ -159,6 +159,7 @@ def test_a_hole_that_carries_net_flux(run, capsys):
     found, report = run(text + '\n[move]\nnet_flux = "point"\n', flux=flux)
     assert np.isclose(report["charge"]["net_flux"], 4 * np.pi)
     assert report["charge"]["cell"] == [3, 3, 3]
+    assert report["figures"]["divergence"] < 1e-12  # but for the cell that holds it
     # The field of a unit charge: flux through a rectangle at distance a from its corner over it, in closed form
     # (Khadjavi 1968, from memory): the wall x = 1 is a sixth of the sphere.
     assert np.isclose(found["bx"][-1].sum() * (2 / 7) ** 2, 4 * np.pi / 6, rtol=1e-6)

@@ -10,6 +10,7 @@ import pytest
 
 import fieldmover as fm
 from fieldmover import compute
+from fieldmover.errors import FieldError
 from fieldmover.forms.fields import close_faces
 from fieldmover.forms.incidence import d2
 from fieldmover.forms.measures import face_conductances
@@ -472,3 +473,11 @@ def test_memory_is_eight_arrays_at_most(given):
     finally:
         tracemalloc.stop()
     assert most <= 8 * flux.f1.itemsize * n**3
+
+
+@pytest.mark.parametrize("name", ["theta", "phi"])
+def test_walls_that_a_sphere_does_not_have(name):
+    grid = fm.spherical_grid([1, 2], np.linspace(0, np.pi, 5), np.linspace(0, 2 * np.pi, 9))
+    flux = fm.flux_from_function(grid, lambda x, y, z: (x, y, z))
+    with pytest.raises(FieldError, match="has none, it ends at a seam or at poles"):
+        fm.project(flux, walls={name: "fixed"})

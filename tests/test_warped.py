@@ -210,3 +210,9 @@ def test_folded_map_is_refused():
     q = np.linspace(0, 1, 9)
     with pytest.raises(GridError, match=r"Jacobian is -.* in cell \[\d, \d, \d\]"):
         fm.warped_grid(q, q, q, lambda a, b, c: (a - 0.3 * np.sin(2 * np.pi * a), b, c))
+
+
+def test_a_map_without_volume_is_refused():
+    q = np.linspace(0, 1, 4)
+    with pytest.raises(GridError, match="Jacobian is 0"):
+        fm.warped_grid(q, q, q, lambda a, b, c: (1 + 0 * (a + b + c), 2 + 0 * a, 3 + 0 * a))

@@ -450,7 +450,7 @@ def _check_map(grid: Grid) -> None:
                     f"axis {axis + 1} is said to be periodic, but its first and last nodes are {gap:.3g} apart"
                 )
     _ = grid.ring_axis
-    if least_corner(x)[0] > 0:
+    if 0 < least_corner(x)[0] < np.inf:  # infinite where no corner has a volume
         return
     j = grid.map.jacobian(*_open(*(centres_of(q) for q in grid.nodes)))
     det = np.einsum("i...,i...", j[:, 0], np.cross(j[:, 1], j[:, 2], axis=0))

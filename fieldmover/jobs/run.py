@@ -27,6 +27,7 @@ from fieldmover.jobs.boxes import (
     move_field,
     read_finer,
     target_of,
+    without_charge,
 )
 from fieldmover.jobs.cleaning import cleaned, perturbed_flux
 from fieldmover.jobs.details import divergences, profile, spectra
@@ -357,6 +358,7 @@ def _store(
             stored = store.read_state(moved)
             record.field("stored", stored.flux)
             measure_stencil(record, loaded, stored.grid, store.read_cells())
+            without_charge(record, stored)
             measure_boxes(loaded, record, stored, [b.read_state(s) for b, s in zip(beside, finer, strict=True)])
             _compare(work, source, stored, plan, steps)
             record.finish(progress)

@@ -40,6 +40,9 @@ def open_walls(grid: Grid, walls: WallsLike) -> Walls:
         unknown = [name for name in walls if name not in grid.map.names]
         if unknown:
             raise FieldError(f"walls: axis {unknown[0]!r}, expected {', '.join(grid.map.names)}")
+        for axis, name in enumerate(grid.map.names):
+            if name in walls and (grid.periodic[axis] or grid.poles[axis] == "both"):
+                raise FieldError(f"walls: axis {name!r} has none, it ends at a seam or at poles")
         each = [walls.get(name, "open") for name in grid.map.names]
     else:
         each = list(walls)
