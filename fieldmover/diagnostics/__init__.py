@@ -20,7 +20,7 @@ from fieldmover.diagnostics.energy import (
 from fieldmover.diagnostics.fluid import Extreme, FluidSums, fluid_extremes, fluid_sums, squares
 from fieldmover.diagnostics.helicity import Helicity, RelativeHelicity, helicity, potential_field, relative_helicity
 from fieldmover.diagnostics.limits import Verdict, check_limits
-from fieldmover.diagnostics.regions import box_cells, expression_cells, shell_cells
+from fieldmover.diagnostics.regions import box_cells, expression_cells, places, shell_cells
 from fieldmover.diagnostics.samples import FluxSpline
 from fieldmover.diagnostics.stencils import StencilDivergence, stencil_divergence
 from fieldmover.diagnostics.summary import Diagnosis, diagnose
@@ -62,6 +62,7 @@ __all__ = [
     "fluid_sums",
     "helicity",
     "hemisphere",
+    "places",
     "potential_field",
     "power_spectrum",
     "relative_divergence",

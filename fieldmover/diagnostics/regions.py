@@ -86,11 +86,16 @@ def expression_cells(grid: Grid, text: str, values: Mapping[str, Array] | None =
     known = dict(values or {})
     formula = Expression(text, {*PLACES, *known})
     if formula.names & set(PLACES):
-        x, y, z = grid.centres()
-        R = np.hypot(x, y)
-        places = (x, y, z, np.hypot(R, z), R, np.arctan2(R, z), np.mod(np.arctan2(y, x), 2 * np.pi))
-        known = {**known, **dict(zip(PLACES, places, strict=True))}
+        known = {**known, **places(grid)}
     return _some(formula.mask(known, grid.shape), grid, f"where {text!r}")
+
+
+def places(grid: Grid) -> dict[str, Array]:
+    """The position of every cell centre by the names that formulas have for it; phi in [0, 2 pi)."""
+    x, y, z = grid.centres()
+    R = np.hypot(x, y)
+    found = (x, y, z, np.hypot(R, z), R, np.arctan2(R, z), np.mod(np.arctan2(y, x), 2 * np.pi))
+    return dict(zip(PLACES, found, strict=True))
 
 
 def distance(grid: Grid, centre: ArrayLike) -> Array:

@@ -8,16 +8,15 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.diagnostics import cell_energies
+from fieldmover.diagnostics import cell_energies, places
 from fieldmover.errors import FieldmoverError, JobError
 from fieldmover.expressions import Expression
 from fieldmover.forms.fields import FaceFlux
 from fieldmover.grids.grid import Grid
-from fieldmover.jobs.schema import POSITIONS, plain
+from fieldmover.jobs.names import PLACES, STRENGTH
+from fieldmover.jobs.schema import plain
 
 Array = NDArray[np.float64]
-
-STRENGTH = "B"
 
 
 class Values:
@@ -47,7 +46,7 @@ class Values:
     @property
     def names(self) -> set[str]:
         """All that may be used."""
-        return {*self._known, STRENGTH, *POSITIONS}
+        return {*self._known, STRENGTH, *PLACES}
 
     @cached_property
     def _places(self) -> dict[str, Array]:
@@ -59,14 +58,6 @@ class Values:
         if name == STRENGTH:
             return np.sqrt(2.0 * cell_energies(self._flux) / self._flux.grid.cell_volumes())
         return self._places[name]
-
-
-def places(grid: Grid) -> dict[str, Array]:
-    """Cartesian, spherical and cylindrical coordinates of cell centres in the common frame."""
-    x, y, z = grid.centres()
-    R = np.hypot(x, y)
-    azimuth, polar = np.arctan2(y, x), np.arctan2(R, z)
-    return {"x": x, "y": y, "z": z, "r": np.hypot(R, z), "R": R, "theta": polar, "phi": azimuth}
 
 
 def evaluated(formula: Expression, values: Values, where: str) -> Array:
@@ -93,7 +84,7 @@ def background(value: float | str, grid: Grid, where: str) -> Array | float:
     """
     if not isinstance(value, str):
         return value
-    formula, known = Expression(value, POSITIONS), places(grid)
+    formula, known = Expression(value, PLACES), places(grid)
     try:
         return formula.evaluate({name: known[name] for name in formula.names}, grid.shape)
     except FieldmoverError as error:

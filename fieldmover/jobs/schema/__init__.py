@@ -7,7 +7,6 @@ from fieldmover.jobs.schema.fields import Magnetic
 from fieldmover.jobs.schema.gas import (
     DIMENSIONS,
     MASS,
-    POSITIONS,
     PRESSURE,
     VELOCITY,
     SourceQuantity,
@@ -23,7 +22,6 @@ from fieldmover.jobs.schema.tables import TAGS, plain
 __all__ = [
     "DIMENSIONS",
     "MASS",
-    "POSITIONS",
     "PRESSURE",
     "TAGS",
     "VELOCITY",

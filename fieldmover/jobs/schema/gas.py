@@ -9,6 +9,7 @@ from pydantic import AfterValidator, BeforeValidator, Discriminator, Field, Tag,
 from fieldmover.conventions.units import CodeUnits, code_units
 from fieldmover.errors import JobError
 from fieldmover.expressions import Expression
+from fieldmover.jobs.names import PLACES
 from fieldmover.jobs.numbers import number
 from fieldmover.jobs.schema.tables import (
     Basis,
@@ -27,8 +28,7 @@ MASS, VELOCITY, PRESSURE = "density", "velocity", "pressure"
 """Quantities that mean something to us: what weighs those carried by mass, what moves, what presses."""
 DIMENSIONS = {MASS: "density", VELOCITY: "velocity", PRESSURE: "pressure", "internal energy": "specific energy"}
 """Of quantities whose names tell."""
-POSITIONS = ("x", "y", "z", "r", "R", "theta", "phi")
-"""What a background may depend on: Cartesian, spherical and cylindrical coordinates of the common frame."""
+
 
 VelocityKind = Literal["coordinate", "eulerian", "four-velocity", "W eulerian"]
 Dimension = Literal[
@@ -61,7 +61,7 @@ def _background(value: Any) -> Any:
         try:
             return number(value)
         except ValueError:
-            formula(value, list(POSITIONS))
+            formula(value, list(PLACES))
             return value
     return float(value) if isinstance(value, int) and not isinstance(value, bool) else value
 

@@ -8,11 +8,10 @@ from itertools import product
 from pathlib import PurePath
 from typing import Any
 
-from fieldmover.jobs.names import known
+from fieldmover.jobs.names import PLACES, STRENGTH, known
 from fieldmover.jobs.schema.gas import (
     DIMENSIONS,
     MASS,
-    POSITIONS,
     PRESSURE,
     VELOCITY,
     SourceQuantity,
@@ -25,8 +24,6 @@ from fieldmover.jobs.schema.tables import Basis, Mistake, plain
 
 UNFIT = re.compile(r"[:<>&\"'\s]")
 """In the name of a file with a view: readers of XDMF take these for something else."""
-STRENGTH = "B"
-"""In formulas, the strength of the field."""
 
 
 def mistakes(job: Job) -> list[Mistake]:
@@ -53,7 +50,7 @@ def formula_names(quantities: dict[str, Any]) -> list[str]:
             found += [f"{plain(name)}_{axis}" for axis in "xyz"]
         else:
             found.append(plain(name))
-    return [*found, STRENGTH, *(place for place in POSITIONS if place not in found)]
+    return [*found, STRENGTH, *(place for place in PLACES if place not in found)]
 
 
 def _bases(job: Job) -> list[Mistake]:
