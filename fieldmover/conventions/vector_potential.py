@@ -6,8 +6,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover.conventions.components import Basis, check_seams
+from fieldmover.conventions.metrics import centre_jacobian
 from fieldmover.forms.fields import EdgePotential, Three, close_edges
-from fieldmover.grids.axes import centres_of
 from fieldmover.grids.grid import Grid, at, quadrature
 
 Array = NDArray[np.float64]
@@ -108,9 +108,7 @@ def cells_from_potential(pot: EdgePotential, basis: Basis) -> Array:
     )
     if basis == "coordinate":
         return covariant
-    q1, q2, q3 = (centres_of(nodes) for nodes in pot.grid.nodes)
-    tangents = pot.grid.map.jacobian(q1[:, None, None], q2[None, :, None], q3[None, None, :])
-    tangents = np.broadcast_to(tangents, (3, 3, *pot.grid.shape))  # [Cartesian component, axis]
+    tangents = centre_jacobian(pot.grid)  # [Cartesian component, axis]
     if basis == "physical":
         return np.asarray(covariant / np.sqrt((tangents**2).sum(axis=0)))
     matrix = np.moveaxis(tangents, (0, 1), (-1, -2))  # A_i = dx^k/dq^i A_k

@@ -223,7 +223,7 @@ def read_finer(loaded: Loaded, target: Target) -> list[State]:
 
 
 class _BoxPlan:
-    """One box of a nested plan, as `FluidPlan` has it; what was moved last is not moved again for the next box."""
+    """One box of a nested plan, as `FluidPlan` has it. Every box is moved for each: they depend on one another."""
 
     def __init__(self, shared: NestedFluidPlan, n: int) -> None:
         self._shared, self._n = shared, n

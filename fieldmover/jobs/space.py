@@ -24,7 +24,7 @@ from fieldmover.conventions.metrics import (
     volume_elements,
 )
 from fieldmover.conventions.velocity import Kind, Motion, motion, stored_velocity
-from fieldmover.errors import DataError, FieldError, JobError
+from fieldmover.errors import DataError, JobError
 from fieldmover.grids.grid import Grid
 from fieldmover.grids.placement import placement, turned, unplaced
 from fieldmover.jobs.schema import Job
@@ -174,8 +174,3 @@ def space_of(
     except DataError as error:
         raise (DataError if arrays else JobError)(f"{side}: {error}") from None
     return space
-
-
-def located(side: Side, name: str, error: FieldError) -> DataError:
-    """An error in a quantity, with its name."""
-    return DataError(f"{side}.fluid.{name}: {error}")
