@@ -1,11 +1,11 @@
 """Which cells of two grids overlap, by how much, and where in the source cell.
 
 A target cell is seen in the index coordinates of the source: its corners are located there and joined by trilinear
-interpolation. It is cut into sub-boxes, at least two along each axis and none much wider than a source cell; a
-sub-box becomes the upright box with the same centre and the same variance along every source axis, and that box
-is shared out among the source cells it reaches. On aligned grids this is the exact overlap; on turned ones
-the upright boxes overlap each other a little and leave small gaps, an error of short wavelength that balancing
-(`fieldmover.interpolation.fluid`) removes.
+interpolation. Unless it is smaller than half a source cell it is cut into sub-boxes, at least two along each axis
+and none much wider than a source cell; a sub-box becomes the upright box with the same centre and the same variance
+along every source axis, and that box is shared out among the source cells it reaches. On aligned grids this is the
+exact overlap; on turned ones the upright boxes overlap each other a little and leave small gaps, an error of short
+wavelength that balancing (`fieldmover.interpolation.fluid`) removes.
 
 Where a target cell is not nearly a parallelepiped in those coordinates (round a pole of the source, where it lies
 partly outside a source without closed form, where it spans much of a ring, or many source cells), the source cells
@@ -21,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
+from fieldmover.interpolation.corners import corner_coordinates, corners_of, expand, jacobian, value
 from fieldmover.interpolation.view import ON_POLE, Block, View
 
 Array = NDArray[np.float64]
@@ -36,8 +37,9 @@ TINY = 1e-6
 TURN = 0.4
 """Part of a ring that a cell may span."""
 
+_LEAST = 1e-7  # parts of a cell up to this are left out
 _TABLE = 1 << 15  # source cells that one target cell may span before the source is cut instead
-_SPLIT = 2  # least number of sub-boxes along each axis of a cell
+_SMALL = 0.5  # a cell up to this size along an axis of its own grid, in cells of the other, is no further divided
 _WIDTH = 1.0  # widest sub-box along an axis of its own grid, in cells of the other
 _UNEVEN = 1.25  # largest ratio of Jacobians within the middle half of a cell that counts as a parallelepiped
 _BULGE = 0.05  # largest difference between the volume of a cell and that of its eight corners
@@ -111,6 +113,8 @@ def overlaps(view: View, block: Block, volumes: Array, chosen: Flags | None = No
             chosen,
             own,
             view.aligned,
+            view.grid.kind == "cartesian",
+            _plain(view, corners),
             view.shape,
             *view.closure,
             start,
@@ -142,92 +146,72 @@ def collect(receiver: Index, giver: Index, part: Array, offset: NDArray[np.int16
     )
 
 
-@compute.kernel
-def corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c):
-    """Index coordinates of the corners of a cell (corner number: 4 a + 2 b + c), made continuous; False if NaN.
+def _plain(view: View, corners: Array) -> bool:
+    """Whether index coordinates of corners mean what they say: none is missing, on a pole, or across a seam."""
+    if view.aligned:
+        return not bool(np.isnan(corners).any())
+    turns, rings, ends = view.closure
+    low, high = corners.min(axis=(1, 2, 3)), corners.max(axis=(1, 2, 3))
+    plain = high - low < np.where(turns > 0, 0.5 * turns, np.inf)  # NaN is not
+    for axis, ring in enumerate(rings):
+        if ring >= 0:
+            plain[axis] &= not (ends[axis, 0] and low[axis] < ON_POLE)
+            plain[axis] &= not (ends[axis, 1] and high[axis] > view.shape[axis] - ON_POLE)
+    return bool(plain.all())
 
-    A corner on a pole has no azimuth of its own and takes that of the corners it shares an edge with.
+
+@compute.kernel
+def _regular(seen, own, volume):
+    """Whether a cell is near enough to a parallelepiped, or at least changes its shape as its volume does.
+
+    At a pole of its own grid a cell is a wedge, and seen in another grid without one, so is its image. The arguments
+    are the Jacobians of the image and of the cell itself.
     """
-    fine = True
-    for n in range(8):
-        for d in range(3):
-            c[n, d] = xi[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
-            fine = fine and not np.isnan(c[n, d])
-    for axis in range(3):
-        ring = rings[axis]
-        if ring < 0 or not fine:
-            continue
-        on_pole = 0
-        for n in range(8):
-            low, high = abs(c[n, axis]) < ON_POLE, abs(c[n, axis] - shape[axis]) < ON_POLE
-            if (ends[axis, 0] and low) or (ends[axis, 1] and high):
-                on_pole |= 1 << n
-        for n in range(8):
-            if on_pole >> n & 1:
-                total, count, reference = 0.0, 0, 0.0
-                for step in (1, 2, 4):
-                    other = n ^ step
-                    if not on_pole >> other & 1:
-                        value = c[other, ring]
-                        if count == 0:
-                            reference = value
-                        elif turns[ring] > 0:
-                            value -= turns[ring] * np.round((value - reference) / turns[ring])
-                        total += value
-                        count += 1
-                if count > 0:
-                    c[n, ring] = total / count
-    for axis in range(3):
-        if turns[axis] > 0:
-            for n in range(1, 8):
-                c[n, axis] -= turns[axis] * np.round((c[n, axis] - c[0, axis]) / turns[axis])
-    return fine
-
-
-@compute.kernel
-def _polynomial(c, p):
-    """Coefficients of the trilinear function with the corners c: 1, a, b, e, ab, ae, be, abe."""
-    for d in range(3):
-        c0, c1, c2, c3, c4, c5, c6, c7 = c[0, d], c[1, d], c[2, d], c[3, d], c[4, d], c[5, d], c[6, d], c[7, d]
-        p[0, d] = c0
-        p[1, d], p[2, d], p[3, d] = c4 - c0, c2 - c0, c1 - c0
-        p[4, d], p[5, d], p[6, d] = c6 - c4 - c2 + c0, c5 - c4 - c1 + c0, c3 - c2 - c1 + c0
-        p[7, d] = c7 - c6 - c5 - c3 + c4 + c2 + c1 - c0
-
-
-@compute.kernel
-def _value(p, d, a, b, e):
-    """Component d of a trilinear function."""
-    return (
-        p[0, d] + a * p[1, d] + b * (p[2, d] + a * p[4, d]) + e * (p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d]))
-    )
-
-
-@compute.kernel
-def _tangents(p, a, b, e, t):
-    """Derivatives t[:, axis] of a trilinear function at (a, b, e); their determinant."""
-    for d in range(3):
-        t[d, 0] = p[1, d] + b * p[4, d] + e * (p[5, d] + b * p[7, d])
-        t[d, 1] = p[2, d] + a * p[4, d] + e * (p[6, d] + a * p[7, d])
-        t[d, 2] = p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d])
-    return (
-        t[0, 0] * (t[1, 1] * t[2, 2] - t[1, 2] * t[2, 1])
-        - t[0, 1] * (t[1, 0] * t[2, 2] - t[1, 2] * t[2, 0])
-        + t[0, 2] * (t[1, 0] * t[2, 1] - t[1, 1] * t[2, 0])
-    )
+    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
+    for n in range(4):  # the corners of a tetrahedron
+        a, b, e = -0.25 if n < 2 else 0.25, -0.25 if n % 2 == 0 else 0.25, -0.25 if n in (0, 3) else 0.25
+        there = seen[0] + a * seen[1] + b * seen[2] + e * seen[3]
+        here = own[0] + a * own[1] + b * own[2] + e * own[3]
+        if not (here > 0 and there > 0):
+            return False
+        ratio = there / here
+        least, most = min(least, there), max(most, there)
+        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
+    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
+    return even and abs(own[0] - volume) <= _BULGE * volume
 
 
 @compute.kernel
 def _overlaps(
-    x, xi, volume, chosen, own, aligned, shape, turns, rings, ends, start, cell, part, offset, reach, irregular
+    x,
+    xi,
+    volume,
+    chosen,
+    own,
+    aligned,
+    upright,
+    plain,
+    shape,
+    turns,
+    rings,
+    ends,
+    start,
+    cell,
+    part,
+    offset,
+    reach,
+    irregular,
 ):
-    """Overlaps of the cells of a slab; the number of overlaps, of which only as many are stored as there is room."""
+    """Overlaps of the cells of a slab; the number of overlaps, of which only as many are stored as there is room.
+
+    `upright`: the cells themselves are boxes; `plain`: see `_plain`.
+    """
     c, p, y = np.empty((8, 3)), np.empty((8, 3)), np.empty((8, 3))
-    t = np.empty((3, 3))
     low, high, width, split = np.empty(3), np.empty(3), np.empty(3), np.empty(3, np.int64)
     base, size = np.empty(3, np.int64), np.empty(3, np.int64)
     pieces, first = np.empty(3, np.int64), np.empty(3, np.int64)
     length, centre = np.empty((3, 4)), np.empty((3, 4))
+    place, steps = np.empty((3, 2), np.int64), np.empty((3, 2), np.int16)
     table = np.zeros((_TABLE, 4))
     count, row = 0, 0
     start[0] = 0
@@ -240,7 +224,11 @@ def _overlaps(
                 irregular[i, j, k] = False
                 if not chosen[i, j, k]:
                     continue
-                regular = corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c)
+                regular = True
+                if plain:
+                    corners_of(xi, i, j, k, c)
+                else:
+                    regular = corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c)
                 outside, far, entries = False, False, 1
                 for d in range(3):
                     low[d], high[d] = c[0, d], c[0, d]
@@ -263,60 +251,92 @@ def _overlaps(
                 if not regular or far:
                     irregular[i, j, k] = not regular
                     continue
-                _polynomial(c, p)
-                for n in range(8):
-                    for d in range(3):
-                        c[n, d] = x[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
-                _polynomial(c, y)
-                if not _regular(p, y, volume[i, j, k], t, c):
+                expand(c, p)
+                here = (volume[i, j, k], 0.0, 0.0, 0.0)
+                if not upright:
+                    corners_of(x, i, j, k, c)
+                    expand(c, y)
+                    here = jacobian(y)
+                if not _regular(jacobian(p), here, volume[i, j, k]):
                     irregular[i, j, k] = not aligned
                     if not aligned:
                         continue
-                    c[0, 0], c[1, 0], c[2, 0], c[3, 0] = 1.0, 0.0, 0.0, 0.0
+                    here = (1.0, 0.0, 0.0, 0.0)
                 if outside:
                     continue
-                _tangents(p, 0.5, 0.5, 0.5, t)
+                small = not own
                 for d in range(3):
-                    widest = max(abs(t[0, d]), abs(t[1, d]), abs(t[2, d]))
-                    split[d] = max(_SPLIT, int(np.ceil(widest / _WIDTH - 1e-6)))
+                    widest = max(abs(p[d + 1, 0]), abs(p[d + 1, 1]), abs(p[d + 1, 2]))
+                    small = small and widest <= _SMALL
+                    split[d] = max(2, int(np.ceil(widest / _WIDTH - 1e-6)))
+                if small:
+                    if count + 8 > cell.size:
+                        count += 8
+                        start[row] = count
+                        continue
+                    for d in range(3):
+                        half = 0.5 * np.sqrt(p[1, d] ** 2 + p[2, d] ** 2 + p[3, d] ** 2)
+                        left, right = max(p[0, d] - half, low[d]), min(p[0, d] + half, high[d])
+                        begin, length[d, 0], length[d, 1], centre[d, 0], centre[d, 1] = _halves(
+                            max(left, 0.0) if ends[d, 0] else left,
+                            min(right, np.float64(shape[d])) if ends[d, 1] else right,
+                        )
+                        for m in range(2):
+                            place[d, m] = begin + m
+                            if turns[d] > 0:
+                                place[d, m] = _wrapped(begin + m, shape[d])
+                            elif not 0 <= begin + m < shape[d]:
+                                length[d, m] = 0.0
+                            steps[d, m] = np.int16(np.rint(OFFSET_SCALE * centre[d, m]))
+                    kept = 0.0
+                    for n in range(8):  # without branches: which cells are reached is not to be foreseen
+                        f, g, h = n >> 2, n >> 1 & 1, n & 1
+                        amount = length[0, f] * length[1, g] * length[2, h]
+                        cell[count] = (place[0, f] * shape[1] + place[1, g]) * shape[2] + place[2, h]
+                        part[count] = amount
+                        offset[count, 0], offset[count, 1], offset[count, 2] = steps[0, f], steps[1, g], steps[2, h]
+                        kept += amount
+                        count += amount > _LEAST
+                    reach[i, j, k] = 1.0 if kept > 1 - TINY else kept
+                    start[row] = count
+                    continue
                 for d in range(3):
-                    square = (t[d, 0] / split[0]) ** 2 + (t[d, 1] / split[1]) ** 2 + (t[d, 2] / split[2]) ** 2
+                    square = (p[1, d] / split[0]) ** 2 + (p[2, d] / split[1]) ** 2 + (p[3, d] / split[2]) ** 2
                     width[d] = 0.5 * np.sqrt(square)
                 total, kept = 0.0, 0.0
                 for n1 in range(split[0]):
-                    a = (n1 + 0.5) / split[0]
+                    a = (n1 + 0.5) / split[0] - 0.5
                     for n2 in range(split[1]):
-                        b = (n2 + 0.5) / split[1]
+                        b = (n2 + 0.5) / split[1] - 0.5
                         for n3 in range(split[2]):
-                            e = (n3 + 0.5) / split[2]
-                            share = c[0, 0] + (a - 0.5) * c[1, 0] + (b - 0.5) * c[2, 0] + (e - 0.5) * c[3, 0]
+                            e = (n3 + 0.5) / split[2] - 0.5
+                            share = here[0] + a * here[1] + b * here[2] + e * here[3]
                             total += share
                             for d in range(3):
-                                middle = _value(p, d, a, b, e)
+                                middle = value(p, d, a, b, e)
                                 left, right = max(middle - width[d], low[d]), min(middle + width[d], high[d])
                                 if ends[d, 0]:
                                     left = max(left, 0.0)
                                 if ends[d, 1]:
                                     right = min(right, np.float64(shape[d]))
                                 begin, end = np.int64(np.floor(left)), np.int64(np.floor(right))
-                                first[d] = begin - base[d]
+                                first[d], pieces[d] = begin - base[d], end - begin + 1
                                 if begin == end:
                                     length[d, 0], centre[d, 0] = 1.0, 0.5 * (left + right) - begin - 0.5
                                 else:
                                     scale = 1.0 / (right - left)
-                                    for m in range(end - begin + 1):
+                                    for m in range(pieces[d]):
                                         cut_left = max(left, np.float64(begin + m))
                                         cut_right = min(right, begin + m + 1.0)
                                         length[d, m] = (cut_right - cut_left) * scale
                                         centre[d, m] = 0.5 * (cut_left + cut_right) - (begin + m) - 0.5
-                                pieces[d] = end - begin + 1
                                 if turns[d] == 0 and (begin < 0 or end >= shape[d]):
                                     for m in range(pieces[d]):
                                         if not 0 <= begin + m < shape[d]:
                                             length[d, m] = 0.0
                                 if own:
                                     for m in range(pieces[d]):
-                                        centre[d, m] = (a if d == 0 else b if d == 1 else e) - 0.5
+                                        centre[d, m] = a if d == 0 else b if d == 1 else e
                             for f in range(pieces[0]):
                                 for g in range(pieces[1]):
                                     plane = share * length[0, f] * length[1, g]
@@ -329,44 +349,38 @@ def _overlaps(
                                         table[line + h, 2] += amount * centre[1, g]
                                         table[line + h, 3] += amount * centre[2, h]
                 reach[i, j, k] = 1.0 if kept > (1 - TINY) * total else kept / total
-                for n in range(entries):
-                    amount = table[n, 0]
-                    if amount > 1e-7 * total:
-                        if count < cell.size:
-                            f = base[0] + n // (size[1] * size[2])
-                            g = base[1] + n // size[2] % size[1]
-                            h = base[2] + n % size[2]
-                            cell[count] = (f % shape[0] * shape[1] + g % shape[1]) * shape[2] + h % shape[2]
-                            part[count] = amount / total
-                            for d in range(3):
-                                offset[count, d] = np.int16(np.round(table[n, d + 1] / amount * OFFSET_SCALE))
-                        count += 1
-                    table[n, 0], table[n, 1], table[n, 2], table[n, 3] = 0.0, 0.0, 0.0, 0.0
+                n = 0
+                for f in range(size[0]):
+                    for g in range(size[1]):
+                        for h in range(size[2]):
+                            amount = table[n, 0]
+                            if amount > _LEAST * total:
+                                if count < cell.size:
+                                    cell[count] = (
+                                        _wrapped(base[0] + f, shape[0]) * shape[1] + _wrapped(base[1] + g, shape[1])
+                                    ) * shape[2] + _wrapped(base[2] + h, shape[2])
+                                    part[count] = amount / total
+                                    scale = OFFSET_SCALE / amount
+                                    for d in range(3):
+                                        offset[count, d] = np.int16(np.rint(table[n, d + 1] * scale))
+                                count += 1
+                            table[n, 0], table[n, 1], table[n, 2], table[n, 3] = 0.0, 0.0, 0.0, 0.0
+                            n += 1
                 start[row] = count
     return count
 
 
 @compute.kernel
-def _regular(p, y, volume, t, own):
-    """Whether a cell is near enough to a parallelepiped, or at least changes its shape as its volume does.
+def _halves(left, right):
+    """A stretch of at most one cell's width: its first cell, the parts in that and in the next, and their middles."""
+    begin = np.floor(left)
+    edge = min(right, begin + 1)
+    part = (edge - left) / (right - left)
+    middle, beyond = 0.5 * (left + edge) - begin - 0.5, 0.5 * (edge + right) - begin - 1.5
+    return np.int64(begin), part, 1.0 - part, middle, max(beyond, -0.5)
 
-    At a pole of its own grid a cell is a wedge, and seen in another grid without one, so is its image. A linear fit
-    of the Jacobian of the cell itself is left in own[:4, 0]: value in the middle and three slopes.
-    """
-    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
-    for m in range(4):
-        own[m, 0] = 0.0
-    for n in (0, 3, 5, 6):  # the corners of a tetrahedron
-        a, b, e = 0.25 + 0.5 * (n >> 2), 0.25 + 0.5 * (n >> 1 & 1), 0.25 + 0.5 * (n & 1)
-        here, seen = _tangents(y, a, b, e, t), _tangents(p, a, b, e, t)
-        if not (here > 0 and seen > 0):
-            return False
-        own[0, 0] += 0.25 * here
-        own[1, 0] += (4 * a - 2) * here
-        own[2, 0] += (4 * b - 2) * here
-        own[3, 0] += (4 * e - 2) * here
-        ratio = seen / here
-        least, most = min(least, seen), max(most, seen)
-        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
-    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
-    return even and abs(own[0, 0] - volume) <= _BULGE * volume
+
+@compute.kernel
+def _wrapped(place, number):
+    """A place brought into 0 to number - 1; divisions are slow, and few places are beyond."""
+    return place if 0 <= place < number else place % number

@@ -7,7 +7,8 @@ from numpy.typing import NDArray
 
 from fieldmover import compute
 from fieldmover.interpolation.aligned import azimuth_of
-from fieldmover.interpolation.overlaps import TINY, TURN, corner_coordinates
+from fieldmover.interpolation.corners import corner_coordinates
+from fieldmover.interpolation.overlaps import TINY, TURN
 from fieldmover.interpolation.parcels import parcels
 from fieldmover.interpolation.view import Block, View
 

@@ -1,0 +1,104 @@
+"""A cell seen in the index coordinates of another grid: its corners, and the trilinear function that joins them."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from fieldmover import compute
+from fieldmover.interpolation.view import ON_POLE
+
+
+@compute.kernel
+def corners_of(x, i, j, k, c):
+    """Copy components at the corners of a cell (corner number: 4 a + 2 b + c)."""
+    for n in range(8):
+        for d in range(3):
+            c[n, d] = x[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
+
+
+@compute.kernel
+def corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c):
+    """Index coordinates of the corners of a cell, as `corners_of`, made continuous; False if NaN.
+
+    A corner on a pole has no azimuth of its own and takes that of the corners it shares an edge with.
+    """
+    fine = True
+    for n in range(8):
+        for d in range(3):
+            c[n, d] = xi[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
+            fine = fine and not np.isnan(c[n, d])
+    for axis in range(3):
+        ring = rings[axis]
+        if ring < 0 or not fine:
+            continue
+        on_pole = 0
+        for n in range(8):
+            low, high = abs(c[n, axis]) < ON_POLE, abs(c[n, axis] - shape[axis]) < ON_POLE
+            if (ends[axis, 0] and low) or (ends[axis, 1] and high):
+                on_pole |= 1 << n
+        for n in range(8):
+            if on_pole >> n & 1:
+                total, count, reference = 0.0, 0, 0.0
+                for step in (1, 2, 4):
+                    other = n ^ step
+                    if not on_pole >> other & 1:
+                        value = c[other, ring]
+                        if count == 0:
+                            reference = value
+                        elif turns[ring] > 0:
+                            value -= turns[ring] * np.round((value - reference) / turns[ring])
+                        total += value
+                        count += 1
+                if count > 0:
+                    c[n, ring] = total / count
+    for axis in range(3):
+        if turns[axis] > 0:
+            for n in range(1, 8):
+                c[n, axis] -= turns[axis] * np.round((c[n, axis] - c[0, axis]) / turns[axis])
+    return fine
+
+
+@compute.kernel
+def expand(c, p):
+    """Coefficients of the trilinear function with the corners c about the middle: 1, a, b, e, ab, ae, be, abe.
+
+    a, b and e go from -1/2 to 1/2.
+    """
+    for d in range(3):
+        s0, s1, s2, s3 = c[0, d] + c[1, d], c[2, d] + c[3, d], c[4, d] + c[5, d], c[6, d] + c[7, d]
+        t0, t1, t2, t3 = c[1, d] - c[0, d], c[3, d] - c[2, d], c[5, d] - c[4, d], c[7, d] - c[6, d]
+        p[0, d] = 0.125 * (s0 + s1 + s2 + s3)
+        p[1, d], p[2, d] = 0.25 * (s2 + s3 - s0 - s1), 0.25 * (s1 + s3 - s0 - s2)
+        p[3, d] = 0.25 * (t0 + t1 + t2 + t3)
+        p[4, d], p[5, d] = 0.5 * (s0 + s3 - s1 - s2), 0.5 * (t2 + t3 - t0 - t1)
+        p[6, d], p[7, d] = 0.5 * (t1 + t3 - t0 - t2), t0 + t3 - t1 - t2
+
+
+@compute.kernel
+def value(p, d, a, b, e):
+    """Component d of a trilinear function."""
+    return (
+        p[0, d] + a * p[1, d] + b * (p[2, d] + a * p[4, d]) + e * (p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d]))
+    )
+
+
+@compute.kernel
+def _triple(p, f, g, h):
+    """Determinant of three coefficients."""
+    return (
+        p[f, 0] * (p[g, 1] * p[h, 2] - p[g, 2] * p[h, 1])
+        + p[f, 1] * (p[g, 2] * p[h, 0] - p[g, 0] * p[h, 2])
+        + p[f, 2] * (p[g, 0] * p[h, 1] - p[g, 1] * p[h, 0])
+    )
+
+
+@compute.kernel
+def jacobian(p):
+    """Jacobian of a trilinear function: its mean over the middle half of the cell and its three slopes."""
+    mean = _triple(p, 1, 2, 3) + (_triple(p, 1, 4, 5) + _triple(p, 4, 2, 6) + _triple(p, 5, 6, 3)) / 16
+    return (
+        mean,
+        _triple(p, 1, 4, 3) + _triple(p, 1, 2, 5),
+        _triple(p, 4, 2, 3) + _triple(p, 1, 2, 6),
+        _triple(p, 5, 2, 3) + _triple(p, 1, 6, 3),
+    )
