@@ -30,15 +30,16 @@ from fieldmover.interpolation.exchange import even_out
 from fieldmover.interpolation.images import laid_out
 from fieldmover.interpolation.overlaps import Overlaps, collect, overlaps
 from fieldmover.interpolation.parcels import parcels
+from fieldmover.interpolation.reach import Part, cut_off, part_of, reached
 from fieldmover.interpolation.reconstruct import reconstruct
 from fieldmover.interpolation.seen import seen
-from fieldmover.interpolation.view import Block, View
+from fieldmover.interpolation.view import Block, View, bounds
 
 Array = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
 _GROUPS = 4  # partial sums over the target, added in order: fixed, so that the bits are
-_SWEEPS = 4
+_SWEEPS = 3
 _OVER = 1.6  # over-relaxation of all sweeps but the first and the last
 _NEARLY = 0.8  # an irregular cell with this much in it and all its parcels inside counts as covered
 _KEEP = 3 << 30  # bytes of overlaps kept; those beyond are measured anew in every pass
@@ -124,39 +125,57 @@ class FluidPlan:
 
     def __init__(self, source: Grid, target: Grid) -> None:
         self.source, self.target = source, target
-        self._images, self._cells, self._box = laid_out(source, target)
-        self._volume = self._images.cell_volumes().reshape(-1)
-        self._view, back = View(target, self._images), View(self._images, self._box)
-        irregular = self._measure()
+        self._take(reached(source, target))
+        irregular, touched = self._measure()
+        if cut_off(touched, self._part, source.shape):
+            self._take(None)
+            irregular, _ = self._measure()
+        back = View(self._images, self._box)
         self._contained, near, split = seen(back, irregular)
         if near.any():
             self._cut(back, near, split, irregular)
         self._balance()
         self._rescue(back, split)
         self._even_out()
-        self.contained = self._contained
-        if self._cells is not None:
-            self.contained = np.zeros(source.shape, dtype=np.bool_)
-            np.logical_or.at(self.contained, np.ix_(*self._cells), self._contained)
+        self.contained = np.zeros(source.shape, dtype=np.bool_)
+        inner = self.contained[self._part]
+        if self._cells is None:
+            inner[...] = self._contained
+        else:
+            np.logical_or.at(inner, np.ix_(*self._cells), self._contained)
 
-    def _measure(self) -> Flags:
-        """Measure the overlaps of regular cells, keeping them while there is room; mark the irregular cells."""
+    def _take(self, part: Part | None) -> None:
+        """Work with a part of the source, or with all of it."""
+        n1, n2, n3 = self.source.shape
+        self._part = part or (slice(0, n1), slice(0, n2), slice(0, n3))
+        self._inner = self.source if part is None else part_of(self.source, part)
+        self._images, self._cells, self._box = laid_out(self._inner, self.target)
+        self._volume = self._images.cell_volumes().reshape(-1)
+        self._view = View(self.target, self._images)
+
+    def _measure(self) -> tuple[Flags, Flags]:
+        """Measure the overlaps of regular cells, keeping them while there is room.
+
+        Returns the irregular target cells, and the source cells with overlaps.
+        """
         self._target_volume = self.target.cell_volumes()
         self._regions = self._view.blocks
         self._kept: list[Overlaps | None] = [None] * len(self._regions)
         self.coverage = np.empty(self.target.shape)
         irregular = np.empty(self.target.shape, dtype=np.bool_)
+        touched = np.zeros(self._volume.size, dtype=np.bool_)
         number = [0]
 
         def work(n: int) -> None:
             where = self._regions[n]
             block, self.coverage[where], irregular[where] = overlaps(self._view, where, self._target_volume)
+            touched[block.cell] = True
             number[0] += block.cell.size
             if number[0] * _BYTES < _KEEP:
                 self._kept[n] = block
 
         compute.for_each(work, range(len(self._regions)))
-        return irregular
+        return irregular, touched.reshape(self._images.shape)
 
     def _cut(self, back: View, near: Flags, split: NDArray[np.int8], irregular: Flags) -> None:
         """Overlaps of the irregular target cells, seen from the source cells near them."""
@@ -164,7 +183,7 @@ class FluidPlan:
         strange = np.zeros(self._images.shape, dtype=np.bool_)
 
         def work(whole: Block) -> tuple:
-            where = _bounds(near, whole)
+            where = bounds(near, whole)
             if where is None:
                 return ()
             block, _, strange[where] = overlaps(back, where, volume, near[where])
@@ -277,7 +296,7 @@ class FluidPlan:
             If a content is negative or not finite, or lies on another grid than the plan's source.
         """
         self._check(content.cells, "cell contents", True)
-        return CellContent(self.target, self._gather(self._density(content), None, content.cells))
+        return CellContent(self.target, self._gather(self._density(content), None, content.cells[self._part]))
 
     def move_by_mass(self, mass: CellContent, values: ArrayLike) -> tuple[CellContent, Array]:
         """Move values per mass (velocity, specific energy, composition) with the mass that carries them.
@@ -317,12 +336,14 @@ class FluidPlan:
             raise FieldError(f"values by mass: shape {values.shape}, expected (..., *{self.source.shape})")
         self._check(mass.cells, "cell contents", True)
         density = self._density(mass)
-        moved = self._gather(density, None, mass.cells)
+        inner = mass.cells[self._part]
+        moved = self._gather(density, None, inner)
         result = np.empty((*values.shape[:-3], *self.target.shape))
         for n in np.ndindex(values.shape[:-3]):
             self._check(values[n], "values by mass", False)
-            form = self._form(values[n], density, mass.cells, np.ones(self._volume.size))
-            carried = self._gather(form, density, mass.cells * values[n])
+            value = values[n][self._part]
+            form = self._form(value, density, inner, np.ones(self._volume.size))
+            carried = self._gather(form, density, inner * value)
             result[n] = np.divide(carried, moved, out=np.zeros_like(carried), where=moved > 0)
         return CellContent(self.target, moved), result
 
@@ -330,8 +351,8 @@ class FluidPlan:
         """Reconstruction of the density, times the balancing factor of the source cell."""
         if content.grid is not self.source:
             raise FieldError(f"contents on {content.grid!r}, expected on the source of the plan, {self.source!r}")
-        volume = self.source.cell_volumes()
-        return self._form(content.cells / volume, None, volume, self._u)
+        volume = self._inner.cell_volumes()
+        return self._form(content.cells[self._part] / volume, None, volume, self._u)
 
     def _form(self, field: Array, carrier: Array | None, weight: Array, scale: Array) -> Array:
         """Limited reconstruction of a cell field whose mean over overlaps, by volume or by carrier, is the field.
@@ -339,7 +360,7 @@ class FluidPlan:
         `weight` is what the overlaps of a contained cell add up to. Returns one row per cell: value in the middle,
         three slopes per cell, all times `scale`; then two columns of work space.
         """
-        form = self._on_images(reconstruct(self.source, field).reshape(*self.source.shape, -1))
+        form = self._on_images(reconstruct(self._inner, field).reshape(*self._inner.shape, -1))
         form, weight = form.reshape(-1, form.shape[-1]), self._on_images(weight).reshape(-1)
         columns = self._columns()
         self._scatter(
@@ -361,7 +382,7 @@ class FluidPlan:
         return self._exchange.apply(out.reshape(self.target.shape))
 
     def _on_images(self, values: Array) -> Array:
-        """Values of source cells, shape (n1, n2, n3, ...), for all their images."""
+        """Values of the source cells in use, shape (n1, n2, n3, ...), for all their images."""
         return values if self._cells is None else values[np.ix_(*self._cells)]
 
     @staticmethod
@@ -373,18 +394,6 @@ class FluidPlan:
                 f"{what}: {int(bad.sum())} are {'negative or ' if positive else ''}not finite, the first "
                 f"{cells[tuple(place)]} at cell {place}"
             )
-
-
-def _bounds(marked: Flags, block: Block) -> Block | None:
-    """The smallest block that holds the marked cells of a block; None without any."""
-    inside = marked[block]
-    if not inside.any():
-        return None
-    where = []
-    for axis, part in enumerate(block):
-        lines = np.flatnonzero(inside.any(axis=tuple(d for d in range(3) if d != axis)))
-        where.append(slice(part.start + int(lines[0]), part.start + int(lines[-1]) + 1))
-    return where[0], where[1], where[2]
 
 
 def _carrier(carrier: Array | None) -> tuple[bool, Array]:
