@@ -167,6 +167,9 @@ def test_a_hole_that_carries_net_flux(run, capsys):
     assert np.isclose(net[3, 3, 3], 4 * np.pi)
     net[3, 3, 3] = 0
     assert np.abs(net).max() < 1e-12
+    _, again = run(text + '\n[move]\nnet_flux = "point"\n', flux=flux, command="check")
+    assert again["charge"] == report["charge"]
+    assert again["figures"]["divergence"] == report["figures"]["divergence"]
 
 
 @pytest.mark.parametrize(

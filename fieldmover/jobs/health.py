@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import json
 from dataclasses import replace
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -17,7 +15,6 @@ from fieldmover.interpolation.cells import cells_from_flux
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.read import State
 from fieldmover.jobs.schema import MASS, PRESSURE, VELOCITY
-from fieldmover.snapshots.gate import Snapshot
 
 Array = NDArray[np.float64]
 
@@ -74,16 +71,6 @@ def cured(loaded: Loaded, state: State) -> tuple[State, list[dict[str, Any]]]:
 def mass_added(found: list[dict[str, Any]]) -> float:
     """By all rules that were applied."""
     return float(sum(rule["mass_added"] for rule in found if rule["applied"]))
-
-
-def stored_cures(path: Path) -> list[dict[str, Any]]:
-    """What rules had found when a file was written, from the report in it; nothing if it has none."""
-    try:
-        with Snapshot(path) as snapshot:
-            report = json.loads(snapshot.read("/fieldmover/report").tobytes().decode())
-        return [rule for rule in report["health"] if isinstance(rule, dict)]
-    except (DataError, ValueError, KeyError, TypeError):
-        return []
 
 
 def _gas(state: State) -> Gas:

@@ -33,7 +33,7 @@ from fieldmover.jobs.cleaning import cleaned, perturbed_flux
 from fieldmover.jobs.details import divergences, profile, spectra
 from fieldmover.jobs.fluid import move_fluid, totals, with_formulas
 from fieldmover.jobs.grids import groups_of, target_grid
-from fieldmover.jobs.health import cured, mass_added, stored_cures
+from fieldmover.jobs.health import cured, mass_added
 from fieldmover.jobs.load import Loaded
 from fieldmover.jobs.measure import (
     cell_values,
@@ -45,6 +45,7 @@ from fieldmover.jobs.measure import (
 )
 from fieldmover.jobs.progress import Progress
 from fieldmover.jobs.read import State, read_cells, read_source, read_target
+from fieldmover.jobs.recall import recall
 from fieldmover.jobs.record import Record
 from fieldmover.jobs.regions import Cells, by_place, region_figures, region_masks, surfaces_of
 from fieldmover.jobs.schema import Move, Within
@@ -213,12 +214,13 @@ def check(
         finer = [] if target is None or not there else read_finer(loaded, target)
         if there:
             record.file("target", loaded.target)
-            record.values["health"] = stored_cures(loaded.target)
+            recall(loaded.target, record)
     work = _work(loaded, "check", stored.grid, folder, progress, record)
     with progress.stage("measuring"):
         if there:
             record.field("stored", stored.flux)
             measure_stencil(record, loaded, space.grid, read_cells(loaded, space.grid))
+            without_charge(record, stored)
             measure_boxes(loaded, record, stored, finer)
             _compare(work, source, stored, FluidPlan(source.grid, stored.grid), {})
         else:
