@@ -4,8 +4,8 @@ Overlaps are measured, so the volumes a target cell receives add up to its own o
 too much there is evened out by flows of volume through the faces, which carry the density of the cell they leave
 (donor-cell differences; Margolin & Shashkov 2003, Second-order sign-preserving conservative interpolation on general
 grids). That keeps totals, signs and ranges. The flows are the smallest in the least-squares sense, found by
-`fieldmover.interpolation.multigrid`. What its few cycles leave is passed along a tree of neighbours, so that the
-result is exact whatever the solve reached.
+`fieldmover.interpolation.multigrid`. What its few cycles leave is passed along rows of cells and along a tree of rows,
+so that the result is exact whatever the solve reached.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
-from fieldmover.interpolation.multigrid import in_slabs, solve
+from fieldmover.interpolation.multigrid import equations, in_slabs, solve
 
 Array = NDArray[np.float64]
 Flags = NDArray[np.bool_]
@@ -26,6 +26,9 @@ _ROUND_OFF = 1e-6  # part of a cell
 _CUT = 0.01  # a cell with no more than this from cut source cells takes or leaves none of it
 _EASE = 8.0  # how much more readily volume comes from outside than from neighbours
 _ROOTS = 0.01  # least part of a cell that is room for it to be the root of a tree
+# How far to solve. Without room all that is left comes from one place.
+_OPEN, _CLOSED = 2e-3, 1e-4
+_LEAST = float(np.finfo(np.float64).tiny)
 _MOST = 0.95  # a cell never passes on more than this part of what it holds
 
 
@@ -50,8 +53,7 @@ class Exchange:
     def apply(self, content: Array) -> Array:
         """Contents of cells after the flows, `extra` already in them; shape (n1, n2, n3)."""
         out = np.empty_like(content)
-        whole = self.held + self.extra
-        in_slabs(lambda a, b: _pass_on(a, b, content, whole, self.flow, out), content.shape)
+        in_slabs(lambda a, b: _pass_on(a, b, content, self.held, self.extra, self.flow, out), content.shape)
         return out
 
 
@@ -85,20 +87,18 @@ def even_out(
     >>> even_out((False,) * 3, one, np.array([0, 1, 1, 0]).reshape(4, 1, 1) == 1, held, 0 * one)[1][:, 0, 0].round(12)
     array([0.51, 1.  , 1.  , 0.  ])
     """
-    part = held / volume
-    covered = covered | (part > 1 - _ROUND_OFF)
+    whole, missing, room = covered.copy(), np.empty_like(held), np.empty_like(held)
     for _ in range(_TRIES):
-        missing = np.where(covered, volume - held, 0.0)
-        room = np.where(covered, np.where(cut > _CUT * volume, cut, 0.0), np.minimum(held, np.abs(volume - held)))
-        found = exchange(periodic, held, missing, room, ~covered)
-        if covered.all():
-            break
+        in_slabs(lambda a, b: _wants(a, b, volume, held, cut, whole, missing, room), held.shape)
+        found = exchange(periodic, held, missing, room, ~whole)
+        if whole.all():
+            return found, np.ones(held.shape)
         part = found.apply(held + found.extra) / volume
-        over = ~covered & (part > 1 + _ROUND_OFF**2)
+        over = ~whole & (part > 1 + _ROUND_OFF**2)
         if not over.any():
             break
-        covered |= over
-    return found, np.where(covered, 1.0, np.clip(part, 0.0, 1.0))
+        np.logical_or(whole, over, out=whole)
+    return found, np.where(whole, 1.0, np.clip(part, 0.0, 1.0))
 
 
 def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, room: Array, free: Flags) -> Exchange:
@@ -136,24 +136,24 @@ def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, roo
     >>> found.apply(4 * held)[:, 0, 0]
     array([4., 4., 4.])
     """
-    links = _links(periodic, held)
-    room = np.where(held > 0, room, 0.0)
-    order, parent, label = _tree(links, held, room > _ROOTS * held)
-    missing = np.where(held > 0, missing, 0.0)
-    closed = label > 0  # without any room: only what they miss as a whole is left
-    if closed.any():
-        size = int(label.max()) + 1
-        lack, volume = (np.bincount(label[closed], part[closed], size) for part in (missing, held))
-        missing[closed] -= held[closed] * (lack / np.where(volume > 0, volume, 1.0))[label[closed]]
-    ease = _EASE * room
-    p = solve(links, ease, missing)
-    flow, extra, left = np.empty(links.shape), np.empty(held.shape), np.empty(held.shape)
-    in_slabs(lambda a, b: _flows(a, b, links, ease, p, missing, flow, extra, left), held.shape)
-    _along_tree(order, parent, left, flow, extra)
-    extra[free | (room == 0)] = 0.0
-    loss = np.empty(held.shape)
-    in_slabs(lambda a, b: _losses(a, b, held, extra, room, flow, loss), held.shape)
-    if loss.max() > _MOST:
+    shape, seams = held.shape, np.array([seam and n > 1 for seam, n in zip(periodic, held.shape, strict=True)])
+    parts = in_slabs(lambda a, b: _runs(a, b, held, missing, room), shape)
+    runs, sums = (np.concatenate(part) for part in zip(*parts, strict=True))
+    starts = np.searchsorted(runs[:, 0], np.arange(shape[0] * shape[1] + 1)).astype(np.int32)
+    order, parent, side, label = _tree(seams, *shape, starts, runs)
+    closed = label.any()
+    if closed:  # without any room: only what they miss as a whole is left
+        lack, volume = (np.bincount(label, sums[:, n]) for n in range(2))
+        lack[0], volume[0] = 0.0, 1.0
+        inside, missing = held > 0, missing.copy()
+        missing[inside] -= held[inside] * np.repeat((lack / volume)[label], runs[:, 2] - runs[:, 1])
+    scale = 1.0 / sums[:, 2].max(initial=_LEAST)
+    p = solve(*equations(seams, scale, held, missing, room, _EASE), _CLOSED if closed else _OPEN)
+    flow, extra, need = np.empty((3, *shape)), np.empty(shape), np.empty(len(runs))
+    in_slabs(lambda a, b: _flows(a, b, seams, held, missing, room, free, starts, runs, p, flow, extra, need), shape)
+    _along_tree(order, parent, side, runs, room, free, need, flow, extra)
+    loss = np.zeros(shape)
+    if any(in_slabs(lambda a, b: _losses(a, b, held, extra, room, flow, loss), shape)):
         part = _MOST / np.maximum(loss, _MOST)  # of what leaves each cell
         for axis, across in enumerate(flow):
             across *= np.where(across > 0, part, np.roll(part, -1, axis=axis))
@@ -161,153 +161,237 @@ def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, roo
     return Exchange(held, extra, flow)
 
 
-def _links(periodic: tuple[bool, bool, bool], held: Array) -> Array:
-    """Conductance to the upper neighbour along every axis: the smaller of the two volumes."""
-    links = np.empty((3, *held.shape))
-    for axis in range(3):
-        links[axis] = np.minimum(held, np.roll(held, -1, axis=axis))
-        if not periodic[axis] or held.shape[axis] == 1:
-            links[axis][tuple(-1 if d == axis else slice(None) for d in range(3))] = 0.0
-    return links
-
-
 @compute.kernel
-def _flows(first, last, links, room, p, missing, flow, extra, left):
-    """Flows that belong to p, what comes from outside, and what every cell still misses then."""
-    n1, n2, n3 = p.shape
-    for i in range(first, last):
-        for j in range(n2):
-            for k in range(n3):
-                here = p[i, j, k]
-                flow[0, i, j, k] = links[0, i, j, k] * (p[i + 1 if i + 1 < n1 else 0, j, k] - here)
-                flow[1, i, j, k] = links[1, i, j, k] * (p[i, j + 1 if j + 1 < n2 else 0, k] - here)
-                flow[2, i, j, k] = links[2, i, j, k] * (p[i, j, k + 1 if k + 1 < n3 else 0] - here)
-                inflow = (
-                    links[0, i - 1, j, k] * (here - p[i - 1, j, k])
-                    - flow[0, i, j, k]
-                    + links[1, i, j - 1, k] * (here - p[i, j - 1, k])
-                    - flow[1, i, j, k]
-                    + links[2, i, j, k - 1] * (here - p[i, j, k - 1])
-                    - flow[2, i, j, k]
-                )
-                extra[i, j, k] = room[i, j, k] * here
-                left[i, j, k] = missing[i, j, k] - inflow - extra[i, j, k]
-
-
-@compute.kernel
-def _tree(links, held, roots):
-    """Cells in the order in which they are reached from the roots, link by link.
-
-    Parent: 0 none, 2 d + 1 the upper, 2 d + 2 the lower neighbour along axis d. Cells that no root reaches get the
-    number of their component as label, from 1.
-    """
-    n1, n2, n3 = held.shape
-    strides, sizes = (n2 * n3, n3, 1), (n1, n2, n3)
-    number = held.size
-    order, parent = np.empty(number, np.int32), np.full(number, -1, np.int8)
-    label = np.zeros(held.shape, np.int32)
-    flat_roots, flat_held, flat_label, flat_links = roots.ravel(), held.ravel(), label.ravel(), links.ravel()
-    head, tail, component = 0, 0, 0
-    for t in range(number):
-        if flat_roots[t]:
-            order[tail], parent[t] = t, 0
-            tail += 1
-    start = 0
-    while True:
-        while head < tail:
-            t = order[head]
-            head += 1
-            for d in range(3):
-                place = t // strides[d] % sizes[d]
-                up = t + strides[d] if place + 1 < sizes[d] else t - place * strides[d]
-                down = t - strides[d] if place > 0 else t + (sizes[d] - 1) * strides[d]
-                if parent[up] < 0 and flat_links[d * number + t] > 0:
-                    order[tail], parent[up], flat_label[up] = up, 2 * d + 2, component
-                    tail += 1
-                if parent[down] < 0 and flat_links[d * number + down] > 0:
-                    order[tail], parent[down], flat_label[down] = down, 2 * d + 1, component
-                    tail += 1
-        while start < number and (parent[start] >= 0 or flat_held[start] <= 0):
-            start += 1
-        if start == number:
-            return order[:tail], parent, label
-        component += 1
-        order[tail], parent[start], flat_label[start] = start, 0, component
-        tail += 1
-
-
-@compute.kernel
-def _along_tree(order, parent, left, flow, extra):
-    """Let every cell get what it still misses from its parent, the last reached first."""
-    n1, n2, n3 = left.shape
-    strides, sizes = (n2 * n3, n3, 1), (n1, n2, n3)
-    number = left.size
-    need, flat_flow, flat_extra = left.ravel(), flow.ravel(), extra.ravel()
-    for n in range(order.size - 1, -1, -1):
-        t = order[n]
-        if parent[t] == 0:
-            flat_extra[t] += need[t]
-            continue
-        d = (parent[t] - 1) // 2
-        place = t // strides[d] % sizes[d]
-        if parent[t] % 2 == 1:
-            other = t + strides[d] if place + 1 < sizes[d] else t - place * strides[d]
-            flat_flow[d * number + t] -= need[t]
-        else:
-            other = t - strides[d] if place > 0 else t + (sizes[d] - 1) * strides[d]
-            flat_flow[d * number + other] += need[t]
-        need[other] += need[t]
-
-
-@compute.kernel
-def _losses(first, last, held, extra, room, flow, loss):
-    """Part of what a cell holds that flows out of it, or that is taken back from outside's share."""
+def _wants(first, last, volume, held, cut, covered, missing, room):
+    """What every cell misses and may take from outside; marks those that are nearly full as covered."""
     _, n2, n3 = held.shape
     for i in range(first, last):
         for j in range(n2):
             for k in range(n3):
-                out = (
-                    max(flow[0, i, j, k], 0.0)
-                    + max(-flow[0, i - 1, j, k], 0.0)
-                    + max(flow[1, i, j, k], 0.0)
-                    + max(-flow[1, i, j - 1, k], 0.0)
-                    + max(flow[2, i, j, k], 0.0)
-                    + max(-flow[2, i, j, k - 1], 0.0)
-                )
-                worst = out / held[i, j, k] if out > 0 else 0.0
-                if extra[i, j, k] < 0:
-                    worst = max(worst, -extra[i, j, k] / room[i, j, k])
-                loss[i, j, k] = worst
+                lack, own = volume[i, j, k] - held[i, j, k], held[i, j, k]
+                whole = covered[i, j, k] or own > (1 - _ROUND_OFF) * volume[i, j, k]
+                fed = cut[i, j, k] if cut[i, j, k] > _CUT * volume[i, j, k] else 0.0
+                covered[i, j, k] = whole
+                missing[i, j, k] = lack if whole else 0.0
+                room[i, j, k] = fed if whole else min(own, abs(lack))
 
 
 @compute.kernel
-def _pass_on(first, last, content, held, flow, out):
-    """Contents after the flows; a cell that held nothing gets and gives nothing."""
-    n1, n2, n3 = content.shape
+def _runs(first, last, held, missing, room):
+    """Unbroken rows of cells along axis 3 that hold something.
+
+    Of each: line (number along axes 1 and 2), first cell, end, the cell with most room or -1; and what it misses and
+    holds, and the largest of either in a cell.
+    """
+    _, n2, n3 = held.shape
+    most = (last - first) * n2 * ((n3 + 1) // 2)
+    runs, sums = np.empty((most, 4), np.int32), np.empty((most, 3))
+    number = 0
     for i in range(first, last):
         for j in range(n2):
-            for k in range(n3):
+            k = 0
+            while k < n3:
                 if not held[i, j, k] > 0:
-                    out[i, j, k] = content[i, j, k]
+                    k += 1
                     continue
-                here = content[i, j, k] / held[i, j, k]
-                volume, gain = held[i, j, k], 0.0
-                for d in range(3):
-                    up = (
-                        (i + 1 if i + 1 < n1 else 0, j, k)
-                        if d == 0
-                        else (i, j + 1 if j + 1 < n2 else 0, k)
-                        if d == 1
-                        else (i, j, k + 1 if k + 1 < n3 else 0)
-                    )
-                    down = (i - 1, j, k) if d == 0 else (i, j - 1, k) if d == 1 else (i, j, k - 1)
-                    to, back = flow[d, i, j, k], flow[d, down[0], down[1], down[2]]
-                    if to > 0:
-                        volume -= to
-                    elif to < 0:
-                        gain -= to * (content[up] / held[up])
-                    if back < 0:
-                        volume += back
-                    elif back > 0:
-                        gain += back * (content[down] / held[down])
-                out[i, j, k] = volume * here + gain
+                start, root, widest = k, -1, 0.0
+                lack, volume, largest = 0.0, 0.0, 0.0
+                while k < n3 and held[i, j, k] > 0:
+                    lack += missing[i, j, k]
+                    volume += held[i, j, k]
+                    largest = max(largest, held[i, j, k], abs(missing[i, j, k]))
+                    if room[i, j, k] > widest and room[i, j, k] > _ROOTS * held[i, j, k]:
+                        root, widest = k, room[i, j, k]
+                    k += 1
+                runs[number, 0], runs[number, 1], runs[number, 2], runs[number, 3] = i * n2 + j, start, k, root
+                sums[number, 0], sums[number, 1], sums[number, 2] = lack, volume, largest
+                number += 1
+    return runs[:number].copy(), sums[:number].copy()
+
+
+@compute.kernel
+def _tree(seams, n1, n2, n3, starts, runs):
+    """Runs in the order in which they are reached from those with a root, neighbour by neighbour.
+
+    Of each: the run it is reached from, -1 for none, and on which side of that it lies, d + 1 above and -d - 1 below
+    along axis d. The cell where it is reached becomes its root. Runs that none with a root reaches get the number of
+    their component as label, from 1.
+    """
+    number = runs.shape[0]
+    order, parent, side = np.empty(number, np.int32), np.full(number, -2, np.int32), np.zeros(number, np.int8)
+    label = np.zeros(number, np.int32)
+    head, tail, component, next_start = 0, 0, 0, 0
+    for t in range(number):
+        if runs[t, 3] >= 0:
+            order[tail], parent[t] = t, -1
+            tail += 1
+    while True:
+        while head < tail:
+            t = order[head]
+            head += 1
+            line, start, end, root = runs[t]
+            for way in range(6):
+                d, step = way // 2, 1 - 2 * (way % 2)
+                i, j = line // n2 + (step if d == 0 else 0), line % n2 + (step if d == 1 else 0)
+                if not (seams[0] or 0 <= i < n1) or not (seams[1] or 0 <= j < n2):
+                    continue
+                if d == 2 and not (seams[2] and (end == n3 if step > 0 else start == 0)):
+                    continue
+                other = i % n1 * n2 + j % n2
+                for u in range(starts[other], starts[other + 1]):
+                    if parent[u] > -2:
+                        continue
+                    low, high = max(start, runs[u, 1]), min(end, runs[u, 2]) - 1
+                    if d == 2:
+                        low = high = 0 if step > 0 else n3 - 1
+                        if runs[u, 1] > low or runs[u, 2] <= low:
+                            continue
+                    if low <= high:
+                        runs[u, 3] = min(max(root, low), high)
+                        order[tail], parent[u], side[u], label[u] = u, t, step * (d + 1), component
+                        tail += 1
+        while next_start < number and parent[next_start] > -2:
+            next_start += 1
+        if next_start == number:
+            return order, parent, side, label
+        component += 1
+        order[tail], parent[next_start], label[next_start] = next_start, -1, component
+        runs[next_start, 3] = (runs[next_start, 1] + runs[next_start, 2]) // 2
+        tail += 1
+
+
+@compute.kernel
+def _flows(first, last, seams, held, missing, room, free, starts, runs, p, flow, extra, need):
+    """Flows that belong to p and what comes from outside; what cells of a run still miss then comes from its root."""
+    n1, n2, n3 = p.shape
+    left = np.empty(n3)
+    for i in range(first, last):
+        up1, open1 = i + 1 if i + 1 < n1 else 0, 1.0 if i + 1 < n1 or seams[0] else 0.0
+        open_down1 = 1.0 if i > 0 or seams[0] else 0.0
+        for j in range(n2):
+            up2, open2 = j + 1 if j + 1 < n2 else 0, 1.0 if j + 1 < n2 or seams[1] else 0.0
+            open_down2 = 1.0 if j > 0 or seams[1] else 0.0
+            for k in range(n3):
+                own, here = held[i, j, k], p[i, j, k]
+                flow1 = open1 * min(own, held[up1, j, k]) * (p[up1, j, k] - here)
+                flow2 = open2 * min(own, held[i, up2, k]) * (p[i, up2, k] - here)
+                below1 = open_down1 * min(held[i - 1, j, k], own) * (here - p[i - 1, j, k])
+                below2 = open_down2 * min(held[i, j - 1, k], own) * (here - p[i, j - 1, k])
+                share = _EASE * room[i, j, k] * here
+                left[k] = missing[i, j, k] - share + ((flow1 - below1) + (flow2 - below2))
+                flow[0, i, j, k], flow[1, i, j, k] = flow1, flow2
+                extra[i, j, k] = 0.0 if free[i, j, k] else share
+            for k in range(n3 - 1):
+                flow[2, i, j, k] = min(held[i, j, k], held[i, j, k + 1]) * (p[i, j, k + 1] - p[i, j, k])
+            k = n3 - 1
+            flow[2, i, j, k] = min(held[i, j, k], held[i, j, 0]) * (p[i, j, 0] - p[i, j, k]) if seams[2] else 0.0
+            left[0] += flow[2, i, j, 0] - flow[2, i, j, k]
+            for k in range(1, n3):
+                left[k] += flow[2, i, j, k] - flow[2, i, j, k - 1]
+            for n in range(starts[i * n2 + j], starts[i * n2 + j + 1]):
+                root, below, above = runs[n, 3], 0.0, 0.0
+                for k in range(runs[n, 1], root):
+                    below += left[k]
+                    flow[2, i, j, k] -= below
+                for k in range(runs[n, 2] - 1, root, -1):
+                    above += left[k]
+                    flow[2, i, j, k - 1] += above
+                need[n] = below + above + left[root]
+
+
+@compute.kernel
+def _along_tree(order, parent, side, runs, room, free, need, flow, extra):
+    """Let every run get what it still misses from the one it was reached from, the last reached first."""
+    n2, n3 = flow.shape[2:]
+    for place in range(order.size - 1, -1, -1):
+        t = order[place]
+        i, j, k, lack = runs[t, 0] // n2, runs[t, 0] % n2, runs[t, 3], need[t]
+        u = parent[t]
+        if u < 0:
+            if room[i, j, k] > 0 and not free[i, j, k]:
+                extra[i, j, k] += lack
+            continue
+        need[u] += lack
+        a, b, c = runs[u, 0] // n2, runs[u, 0] % n2, k
+        d = abs(side[t]) - 1
+        if d == 2:
+            c = 0 if k > 0 else n3 - 1
+        if side[t] > 0:
+            flow[d, a, b, c] += lack
+        else:
+            flow[d, i, j, k] -= lack
+        for k in range(c, runs[u, 3]):
+            flow[2, a, b, k] -= lack
+        for k in range(runs[u, 3], c):
+            flow[2, a, b, k] += lack
+
+
+@compute.kernel
+def _losses(first, last, held, extra, room, flow, loss):
+    """Whether cells would pass on more than they may; in rows where some do, which part of what they have.
+
+    It flows out of a cell, or is taken back from outside's share.
+    """
+    _, n2, n3 = held.shape
+    out, own, found = np.empty(n3), np.empty(n3), False
+    for i in range(first, last):
+        for j in range(n2):
+            number, before = 0, flow[2, i, j, n3 - 1]
+            for k in range(n3):
+                out[k] = (
+                    (max(flow[0, i, j, k], 0.0) - min(flow[0, i - 1, j, k], 0.0))
+                    + (max(flow[1, i, j, k], 0.0) - min(flow[1, i, j - 1, k], 0.0))
+                    + (max(flow[2, i, j, k], 0.0) - min(before, 0.0))
+                )
+                before = flow[2, i, j, k]
+                least = -_MOST * room[i, j, k]
+                own[k] = held[i, j, k] + min(max(extra[i, j, k], least), 0.0)
+                number += (out[k] > _MOST * own[k]) | (extra[i, j, k] < least)
+            if number:
+                found = True
+                for k in range(n3):
+                    taken = -extra[i, j, k] / room[i, j, k] if extra[i, j, k] < 0 else 0.0
+                    loss[i, j, k] = max(out[k] / own[k], taken) if out[k] > 0 else taken
+    return found
+
+
+@compute.kernel
+def _densities(i, content, held, extra, out):
+    """Content over volume in a plane, 0 where there is none."""
+    for j in range(out.shape[0]):
+        for k in range(out.shape[1]):
+            volume = held[i, j, k] + extra[i, j, k]
+            out[j, k] = content[i, j, k] / volume if volume > 0 else 0.0
+
+
+@compute.kernel
+def _pass_on(first, last, content, held, extra, flow, out):
+    """Contents after the flows; a cell that held nothing gets and gives nothing."""
+    n1, n2, n3 = content.shape
+    density, row = np.empty((3, n2, n3)), np.empty(n3 + 2)
+    _densities((first - 1) % n1, content, held, extra, density[(first + 2) % 3])
+    _densities(first, content, held, extra, density[first % 3])
+    for i in range(first, last):
+        _densities((i + 1) % n1, content, held, extra, density[(i + 1) % 3])
+        below, own, above = density[(i + 2) % 3], density[i % 3], density[(i + 1) % 3]
+        for j in range(n2):
+            up2 = j + 1 if j + 1 < n2 else 0
+            row[0], row[n3 + 1] = own[j, n3 - 1], own[j, 0]
+            row[1 : n3 + 1] = own[j]
+            back = flow[2, i, j, n3 - 1]
+            for k in range(n3):
+                volume = held[i, j, k] + extra[i, j, k]
+                to1, to2, to3 = flow[0, i, j, k], flow[1, i, j, k], flow[2, i, j, k]
+                from1, from2, from3 = flow[0, i - 1, j, k], flow[1, i, j - 1, k], back
+                back = to3
+                kept = (
+                    volume
+                    - ((max(to1, 0.0) - min(from1, 0.0)) + (max(to2, 0.0) - min(from2, 0.0)))
+                    - (max(to3, 0.0) - min(from3, 0.0))
+                )
+                gain = (
+                    (max(from1, 0.0) * below[j, k] - min(to1, 0.0) * above[j, k])
+                    + (max(from2, 0.0) * own[j - 1, k] - min(to2, 0.0) * own[up2, k])
+                    + (max(from3, 0.0) * row[k] - min(to3, 0.0) * row[k + 2])
+                )
+                out[i, j, k] = kept * row[k + 1] + gain if volume > 0 else content[i, j, k]
