@@ -63,6 +63,15 @@ def fast_kernel(function: Callable) -> Callable:
     return numba.njit(nogil=True, cache=_folder is not None, error_model="numpy", fastmath=options)(function)
 
 
+def inlined(function: Callable) -> Callable:
+    """Compile a piece into every kernel that calls it, with that kernel's rules.
+
+    A call of a kernel that takes arrays counts references to each, in memory that all threads write to: tens of
+    nanoseconds, too much for what is called at every point.
+    """
+    return numba.njit(inline="always")(function)
+
+
 _threads = max(1, len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1)
 
 

@@ -149,7 +149,7 @@ def _hunt(value, nodes, first, last, cell):
     return cell
 
 
-@compute.fast_kernel
+@compute.inlined
 def _basis(value, nodes, pieces, cell, out, place):
     """Active basis functions of a cell, out[place, 0], and their derivatives, out[place, 1], at a value."""
     step = nodes[cell + 1] - nodes[cell]

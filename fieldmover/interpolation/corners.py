@@ -8,7 +8,7 @@ from fieldmover import compute
 from fieldmover.interpolation.view import ON_POLE
 
 
-@compute.kernel
+@compute.inlined
 def corners_of(x, i, j, k, c):
     """Copy components at the corners of a cell (corner number: 4 a + 2 b + c)."""
     for n in range(8):
@@ -58,7 +58,7 @@ def corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c):
     return fine
 
 
-@compute.kernel
+@compute.inlined
 def expand(c, p):
     """Coefficients of the trilinear function with the corners c about the middle: 1, a, b, e, ab, ae, be, abe.
 
@@ -74,7 +74,7 @@ def expand(c, p):
         p[6, d], p[7, d] = 0.5 * (t1 + t3 - t0 - t2), t0 + t3 - t1 - t2
 
 
-@compute.kernel
+@compute.inlined
 def value(p, d, a, b, e):
     """Component d of a trilinear function."""
     return (
@@ -82,7 +82,7 @@ def value(p, d, a, b, e):
     )
 
 
-@compute.kernel
+@compute.inlined
 def _triple(p, f, g, h):
     """Determinant of three coefficients."""
     return (
@@ -92,7 +92,7 @@ def _triple(p, f, g, h):
     )
 
 
-@compute.kernel
+@compute.inlined
 def jacobian(p):
     """Jacobian of a trilinear function: its mean over the middle half of the cell and its three slopes."""
     mean = _triple(p, 1, 2, 3) + (_triple(p, 1, 4, 5) + _triple(p, 4, 2, 6) + _triple(p, 5, 6, 3)) / 16

@@ -190,7 +190,7 @@ def hunt(value, nodes, cell):
     return cell
 
 
-@compute.fast_kernel
+@compute.inlined
 def _basis(value, table, cell, sizes):
     """Basis functions of values and of cells that do not vanish at a place along an axis."""
     nodes, value_pieces, cell_pieces = table[0], table[1], table[2]
@@ -202,7 +202,7 @@ def _basis(value, table, cell, sizes):
     )
 
 
-@compute.fast_kernel
+@compute.inlined
 def _covector(q1, q2, q3, cell1, cell2, cell3, t1, t2, t3, a, strides, sizes):
     (b1, c1), (b2, c2), (b3, c3) = (
         _basis(q1, t1, cell1, sizes),

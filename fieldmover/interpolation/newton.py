@@ -254,7 +254,7 @@ def _newton(x, tangents, start, chained, spline, frame, stop, q, dq, state):
             _components(inverses, tangents, n - column, column + 1, dq)
 
 
-@compute.fast_kernel
+@compute.inlined
 def _components(inverses, tangents, begin, count, dq):
     """Components of the tangents at a block of points: one pair at a time, since memory follows few streams at once."""
     for d in range(3):
@@ -267,7 +267,7 @@ def _components(inverses, tangents, begin, count, dq):
                 )
 
 
-@compute.kernel
+@compute.inlined
 def _remember(trail, length, g, frame):
     """Put g in front of the trail, on the same turn round a seam; a trail ends beside a pole. Returns its length."""
     for d in range(3):
@@ -284,7 +284,7 @@ def _remember(trail, length, g, frame):
     return min(length + 1, _TRAIL)
 
 
-@compute.kernel
+@compute.inlined
 def _extrapolate(trail, length, g, place, frame):
     """The next place of a trail into g, unless that is far from it; returns whether it was done."""
     for d in range(3):
@@ -424,7 +424,7 @@ def _multiply(inverse, x, value, out):
         out[d] = inverse[d, 0] * a + inverse[d, 1] * b + inverse[d, 2] * c
 
 
-@compute.kernel
+@compute.inlined
 def _invert(m, out):
     """Inverse of a 3 x 3 matrix by cofactors; zero for a singular one."""
     out[0, 0] = m[1, 1] * m[2, 2] - m[1, 2] * m[2, 1]

@@ -12,6 +12,7 @@ from fieldmover.forms.fields import CellContent
 from fieldmover.forms.incidence import curl
 from fieldmover.forms.sample import potential_from_function
 from fieldmover.grids import cartesian_grid, spherical_grid
+from fieldmover.grids.grid import Grid
 from fieldmover.interpolation.angular import move_velocity
 from fieldmover.interpolation.fluid import FluidPlan, move_content
 from fieldmover.interpolation.flux import move_flux
@@ -33,9 +34,12 @@ def run(arguments: list[str]) -> None:
 
 
 def _time(n: int, runs: int) -> None:
-    theta, phi = np.linspace(0, np.pi, n + 1), np.linspace(0, 2 * np.pi, 2 * n + 1)
-    source = spherical_grid(np.geomspace(1, 3, n + 1), theta, phi)
-    target = cartesian_grid(*[np.linspace(-1.6, -0.7, n + 1)] * 3)
+    shell = spherical_grid(np.geomspace(1, 3, n + 1), line(0, np.pi, n), line(0, 2 * np.pi, 2 * n))
+    _compare("a part", shell, cartesian_grid(*[line(-1.6, -0.7, n)] * 3), runs)
+    _compare("all", *INSIDE["sphere to box"](n), runs)
+
+
+def _compare(what: str, source: Grid, target: Grid, runs: int) -> None:
     content = CellContent(source, source.cell_volumes())
     plan = FluidPlan(source, target)
     flux = curl(potential_from_function(source, lambda x, y, z: (-y / 2, x / 2, 0 * z)))
@@ -54,7 +58,7 @@ def _time(n: int, runs: int) -> None:
             if turn:
                 taken[name].append(time.perf_counter() - began)
     seconds = {name: statistics.median(values) for name, values in taken.items()}
-    print(f"Seconds, sphere {source.shape} to box {target.shape}:")
+    print(f"Seconds, {what} of a sphere {source.shape} to a box {target.shape}:")
     for name, value in seconds.items():
         print(f"    {name:10s}{value:8.3f}")
     print(f"    content / flux: {seconds['content'] / seconds['flux']:.2f}")
