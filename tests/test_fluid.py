@@ -1,5 +1,7 @@
 """Contents and values by mass on other grids: what is kept, how accurate, how bounded."""
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 import pytest
 
@@ -461,6 +463,32 @@ def test_values_by_mass_are_second_order():
         errors.append(np.abs(FluidPlan(source, target).move_by_mass(mass, value)[1] - exact).mean())
     assert np.log2(errors[0] / errors[2]) / 2 > 1.8
     assert errors[2] < 1e-3
+
+
+def test_what_a_plan_remembers_of_a_mass_follows_its_values():
+    source, target = INSIDE["sphere to box"](8)
+    plan, value = FluidPlan(source, target), smooth(*source.centres())
+    mass = CellContent(source, source.cell_volumes() * value)
+    first, carried = plan.move_by_mass(mass, value)
+    first.cells[...] = -1.0  # a copy is the caller's own
+    again, same = plan.move_by_mass(mass, value)
+    assert np.array_equal(again.cells, plan.move(mass).cells)
+    assert np.array_equal(again.cells, FluidPlan(source, target).move(mass).cells)
+    assert np.array_equal(carried, same)
+    mass.cells[3, 4, 5] *= 1.5
+    other, _ = plan.move_by_mass(mass, value)
+    assert np.array_equal(other.cells, FluidPlan(source, target).move(mass).cells)
+    assert not np.array_equal(other.cells, again.cells)
+
+
+def test_one_plan_serves_several_threads():
+    source, target = INSIDE["sphere to box"](8)
+    plan = FluidPlan(source, target)
+    masses = [CellContent(source, source.cell_volumes() * k * smooth(*source.centres()) ** k) for k in range(1, 9)]
+    expected = [plan.move_by_mass(mass, source.centres())[1] for mass in masses]
+    with ThreadPoolExecutor(4) as pool:
+        found = list(pool.map(lambda mass: plan.move_by_mass(mass, source.centres())[1], masses * 4))
+    assert all(np.array_equal(a, b) for a, b in zip(found, expected * 4, strict=True))
 
 
 def test_bad_contents_are_refused():

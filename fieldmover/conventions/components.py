@@ -8,11 +8,13 @@ grids; with a metric the integral is taken by quadrature, on any grid. Only B^i 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
+from fieldmover import compute
 from fieldmover.conventions.metrics import FlatMetric, Metric, centre_jacobian, face_elements
 from fieldmover.errors import DataError, FieldError
 from fieldmover.forms.fields import FaceFlux, Three, close_faces
@@ -25,6 +27,7 @@ Factors = tuple[Array, Array, Array]
 Basis = Literal["physical", "coordinate", "cartesian"]
 
 _CLOSED = ("cartesian", "cylindrical", "spherical")
+_SLAB = 1 << 15  # cells
 
 SEAM = 1e-5
 """What the two copies of a seam may differ by, relative to the largest value: single precision, and more."""
@@ -130,20 +133,35 @@ def to_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
     """
     if basis == "cartesian" or (grid.kind == "cartesian" and placement(grid) is None):
         return vector
-    return np.asarray(np.einsum("ij...,j...->i...", _tangents(grid, basis), vector))
+    return _by_rows(grid, vector, lambda rows, v: np.einsum("ij...,j...->i...", _tangents(grid, basis, rows), v))
 
 
 def from_cartesian(grid: Grid, vector: Array, basis: Basis) -> Array:
     """Components of a vector at cell centres in a basis of the grid, the inverse of `to_cartesian`."""
     if basis == "cartesian" or (grid.kind == "cartesian" and placement(grid) is None):
         return vector
-    tangents = np.moveaxis(_tangents(grid, basis), (0, 1), (-2, -1))
-    return np.asarray(np.moveaxis(np.linalg.solve(tangents, np.moveaxis(vector, 0, -1)[..., None])[..., 0], -1, 0))
+
+    def solved(rows: slice, v: Array) -> Array:
+        tangents = np.moveaxis(_tangents(grid, basis, rows), (0, 1), (-2, -1))
+        return np.asarray(np.moveaxis(np.linalg.solve(tangents, np.moveaxis(v, 0, -1)[..., None])[..., 0], -1, 0))
+
+    return _by_rows(grid, vector, solved)
 
 
-def _tangents(grid: Grid, basis: Basis) -> Array:
+def _by_rows(grid: Grid, vector: Array, work: Callable[[slice, Array], Array]) -> Array:
+    """Change a vector at cell centres by slabs: nine numbers a cell are many."""
+    out = np.empty((3, *grid.shape))
+
+    def part(rows: slice) -> None:
+        out[:, rows] = work(rows, vector[:, rows])
+
+    compute.for_each(part, compute.slabs(grid.shape[0], _SLAB // (grid.shape[1] * grid.shape[2])))
+    return out
+
+
+def _tangents(grid: Grid, basis: Basis, rows: slice) -> Array:
     """Vectors along the axes at cell centres, [Cartesian component, axis, i1, i2, i3]."""
-    tangents = centre_jacobian(grid)
+    tangents = centre_jacobian(grid, rows)
     return np.asarray(tangents / np.sqrt((tangents**2).sum(axis=0)) if basis == "physical" else tangents)
 
 

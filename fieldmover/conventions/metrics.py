@@ -285,11 +285,11 @@ def geometry_from_arrays(
     return Geometry(stretched, moved, full, light).in_coordinates(_inverse(jacobian))
 
 
-def centre_jacobian(grid: Grid) -> Array:
-    """dx^i / dq^j at the centres of cells, shape (3, 3, n1, n2, n3)."""
+def centre_jacobian(grid: Grid, rows: slice = slice(None)) -> Array:
+    """dx^i / dq^j at the centres of cells, shape (3, 3, n1, n2, n3), or of some rows along axis 1."""
     q1, q2, q3 = (centres_of(nodes) for nodes in grid.nodes)
-    tangents = grid.map.jacobian(q1[:, None, None], q2[None, :, None], q3[None, None, :])
-    return np.asarray(np.broadcast_to(tangents, (3, 3, *grid.shape)))
+    tangents = grid.map.jacobian(q1[rows, None, None], q2[None, :, None], q3[None, None, :])
+    return np.asarray(np.broadcast_to(tangents, (3, 3, q1[rows].size, q2.size, q3.size)))
 
 
 def volume_elements(metric: Metric, grid: Grid) -> Array:

@@ -6,10 +6,33 @@ columns of work space.
 
 from __future__ import annotations
 
+import numpy as np
+from numpy.typing import NDArray
+
 from fieldmover import compute
+from fieldmover.errors import FieldError
 from fieldmover.interpolation.overlaps import OFFSET_SCALE
 
 _STEP = 1 / OFFSET_SCALE
+
+
+def check(cells: NDArray[np.float64], what: str, positive: bool) -> None:
+    """Refuse values that are not finite, or negative ones where they have to be positive.
+
+    Raises
+    ------
+    FieldError
+        That says how many, and where the first is.
+    """
+    least, most = float(cells.min()), float(cells.max())
+    if (0.0 if positive else -np.inf) <= least and -np.inf < least and most < np.inf:
+        return
+    bad = ~np.isfinite(cells) if not positive else ~((cells >= 0) & (cells < np.inf))
+    place = [int(i) for i in np.argwhere(bad)[0]]
+    raise FieldError(
+        f"{what}: {int(bad.sum())} are {'negative or ' if positive else ''}not finite, the first "
+        f"{cells[tuple(place)]} at cell {place}"
+    )
 
 
 @compute.kernel
@@ -28,18 +51,18 @@ def deviations(rows, start, cell, part, offset, v, carried, carrier, form, colum
 
 @compute.kernel
 def centre(first, last, columns, weight, contained, scale, form):
-    """Shift the reconstructions to their mean, scale slopes to the room there is, multiply by `scale`."""
+    """Shift the reconstructions to their mean, scale slopes to the room there is, multiply by `scale`, one or many."""
     for s in range(first, last):
-        deviation = 0.0
+        deviation, times = 0.0, scale[min(s, scale.size - 1)]
         for group in range(columns.shape[0]):
             deviation += columns[group, s]
-        shift = -scale[s] * deviation / weight[s] if contained[s] and weight[s] > 0 else 0.0
+        shift = -times * deviation / weight[s] if contained[s] and weight[s] > 0 else 0.0
         span = 0.5 * (abs(form[s, 1]) + abs(form[s, 2]) + abs(form[s, 3])) + abs(shift)
         room = (1 - 1e-14) * min(form[s, 4], form[s, 5])
         factor = room / span if span > room else 1.0
-        form[s, 0] = scale[s] * (form[s, 0] + factor * shift)
+        form[s, 0] = times * (form[s, 0] + factor * shift)
         for axis in range(1, 4):
-            form[s, axis] *= scale[s] * factor
+            form[s, axis] *= times * factor
         form[s, 4] = 0.0 if contained[s] else 1.0
 
 

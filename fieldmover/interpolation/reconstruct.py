@@ -18,7 +18,7 @@ Array = NDArray[np.float64]
 _CHUNK = 1 << 18  # cells per task
 
 
-def reconstruct(grid: Grid, field: Array) -> Array:
+def reconstruct(grid: Grid, field: Array, out: Array | None = None) -> Array:
     """Limited slopes of a cell field, and the range of its neighbours.
 
     Slopes go on across seams and poles; at walls they are 0 along the axis that ends there.
@@ -27,6 +27,8 @@ def reconstruct(grid: Grid, field: Array) -> Array:
     ----------
     grid : Grid
     field : ndarray, shape (n1, n2, n3)
+    out : ndarray, shape (cells, 6), optional
+        Used for the result.
 
     Returns
     -------
@@ -42,7 +44,7 @@ def reconstruct(grid: Grid, field: Array) -> Array:
     """
     padded = with_neighbours(grid, field, 1)
     weights = [_slope_weights(grid, axis) for axis in range(3)]
-    form = np.empty((*grid.shape, 6))
+    form = (np.empty((field.size, 6)) if out is None else out).reshape(*grid.shape, 6)
     compute.for_each(
         lambda rows: _slopes(rows.start, padded, weights[0], weights[1], weights[2], form[rows]),
         compute.slabs(grid.shape[0], _CHUNK // (grid.shape[1] * grid.shape[2])),
