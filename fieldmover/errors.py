@@ -53,6 +53,10 @@ class ChargeError(FieldError):
         self.charge = charge
 
 
+class PlaceError(FieldError):
+    """A place that was asked for does not suit the grids."""
+
+
 class OutputError(FieldmoverError):
     """The output cannot be written."""
 

@@ -167,6 +167,8 @@ def test_a_hole_that_carries_net_flux(run, capsys):
     assert np.isclose(net[3, 3, 3], 4 * np.pi)
     net[3, 3, 3] = 0
     assert np.abs(net).max() < 1e-12
+    run(text + '\n[move]\nnet_flux = "point"\npoint = [0.8, 0, 0]\n', status=2, flux=flux)
+    assert "move.point = [0.8, 0.0, 0.0]: point charge: the centre" in capsys.readouterr().err
     _, again = run(text + '\n[move]\nnet_flux = "point"\n', flux=flux, command="check")
     assert again["charge"] == report["charge"]
     assert again["figures"]["divergence"] == report["figures"]["divergence"]

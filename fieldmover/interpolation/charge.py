@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from fieldmover import compute
-from fieldmover.errors import FieldError, GridError
+from fieldmover.errors import FieldError, GridError, PlaceError
 from fieldmover.forms.fields import FaceFlux, Three, close_edges, close_faces
 from fieldmover.forms.incidence import d1, d2
 from fieldmover.grids.grid import Grid, at, cosine_drop
@@ -93,8 +93,10 @@ def point_charge_flux(grid: Grid, charge: float, centre: ArrayLike = (0.0, 0.0, 
     Raises
     ------
     FieldError
-        If the charge or the centre is not finite, or the centre lies on a face, or so near to a curved one that it
-        fills half of all directions or more.
+        If the charge is not finite.
+    PlaceError
+        If the centre is not finite, or lies on a face, or so near to a curved one that it fills half of all directions
+        or more.
     GridError
         If a Cartesian axis has a seam, through which such a field does not continue; if there are less than three
         cells round a pole.
@@ -150,7 +152,7 @@ def split_charge(flux: FaceFlux, centre: ArrayLike = (0.0, 0.0, 0.0)) -> tuple[f
 
     Raises
     ------
-    FieldError
+    PlaceError
         If the centre is not in the hole.
 
     Examples
@@ -172,7 +174,7 @@ def split_charge(flux: FaceFlux, centre: ArrayLike = (0.0, 0.0, 0.0)) -> tuple[f
     own = point_charge_flux(grid, charge, centre)
     caught = math.fsum(own.faces[around][at(around, 0)].ravel())
     if abs(caught - charge) > 1e-6 * abs(charge):
-        raise FieldError(
+        raise PlaceError(
             f"point charge: the centre {np.asarray(centre).tolist()} is not in the hole inside "
             f"{grid.map.names[around]} = {grid.nodes[around][0]:.6g}, whose surface carries the net flux {charge:.9g}"
         )
@@ -266,7 +268,7 @@ def clear_centre(grid: Grid, centre: ArrayLike) -> Array | None:
 def _checked_place(centre: ArrayLike) -> Array:
     place = np.array(centre, dtype=np.float64)
     if place.shape != (3,) or not np.isfinite(place).all():
-        raise FieldError(f"point charge at {centre!r}: expected three finite numbers")
+        raise PlaceError(f"point charge at {centre!r}: expected three finite numbers")
     return place
 
 
@@ -316,7 +318,7 @@ def check_place(grid: Grid, faces: Three, whole: float, centre: Array) -> tuple[
     if cell >= 0:
         expected[cell] = whole
     if max(float(np.abs(f).max()) for f in faces) > (0.5 - _ON_FACE) * abs(whole) or (net != expected).any():
-        raise FieldError(
+        raise PlaceError(
             f"point charge: the centre {centre.tolist()} lies on a face, or so near to one that it fills half of all "
             "directions; expected a place well inside a cell or outside the grid (the charge of a hole may be put "
             "anywhere in the hole)"
@@ -364,7 +366,7 @@ def _directions(grid: Grid, axis: int, centre: Array, q: list[Array], along: Arr
     d = np.stack(grid.map.to_cartesian(*point)) - centre[:, None]
     length = np.sqrt((d * d).sum(axis=0))
     if not length.all():
-        raise FieldError(f"point charge: the centre {centre.tolist()} lies on an edge, expected it off all faces")
+        raise PlaceError(f"point charge: the centre {centre.tolist()} lies on an edge, expected it off all faces")
     return np.asarray(d / length)
 
 
@@ -377,7 +379,7 @@ def _angles(grid: Grid, axis: int, centre: Array, q: list[Array], step: Array, p
         end = _directions(grid, axis, centre, q, step * ((piece + 1) / pieces))
         cosine = (begin * end).sum(axis=0)
         if (cosine < _ON_EDGE - 1.0).any():
-            raise FieldError(f"point charge: the centre {centre.tolist()} lies on an edge, expected it off all faces")
+            raise PlaceError(f"point charge: the centre {centre.tolist()} lies on an edge, expected it off all faces")
         volume = _AXIS @ np.cross(begin, end, axis=0)
         total += 2.0 * np.arctan2(volume, 1.0 + cosine + _AXIS @ begin + _AXIS @ end)
         middle = begin + end

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from fieldmover.diagnostics import cell_energies, relative_divergence
-from fieldmover.errors import GridError, JobError
+from fieldmover.errors import GridError, JobError, PlaceError
 from fieldmover.forms.fields import CellContent, FaceFlux
 from fieldmover.forms.incidence import d2
 from fieldmover.grids.ghosts import Ghosts
@@ -108,9 +108,18 @@ def move_field(loaded: Loaded, flux: FaceFlux, target: Target, record: Record) -
 
     Raises
     ------
+    JobError
+        If a point charge cannot be where the job puts it.
     FieldError, ChargeError
         As `move_flux` and its kin.
     """
+    try:
+        return _moved_field(loaded, flux, target, record)
+    except PlaceError as error:
+        raise JobError(f"{loaded.path}: move.point = {loaded.job.move.point}: {error}") from None
+
+
+def _moved_field(loaded: Loaded, flux: FaceFlux, target: Target, record: Record) -> tuple[FaceFlux, list[FaceFlux]]:
     order, outside = loaded.job.move.order, loaded.job.move.outside
     charged = loaded.job.move.net_flux == "point"
     centre: ArrayLike = loaded.job.move.point
