@@ -13,6 +13,8 @@ from fieldmover.grids.kerr import kerr_schild_grid
 from fieldmover.grids.placement import turn_about
 from fieldmover.interpolation import fluid
 from fieldmover.interpolation.fluid import FluidPlan, move_content
+from fieldmover.interpolation.overlaps import overlaps
+from fieldmover.interpolation.view import View
 from tests.reference import _slabs
 
 
@@ -123,6 +125,46 @@ def test_second_order_on_a_smooth_density(name):
         errors.append(np.abs(moved - exact)[covered].sum() / exact[covered].sum())
     assert np.log2(errors[0] / errors[2]) / 2 > 1.85
     assert errors[2] < 4e-4
+
+
+def test_small_wedges_at_an_axis_get_the_density_of_their_middle():
+    """The centroid of a wedge is at two thirds of its length, not at half."""
+    source = cube(16, 0.6)
+    target = cylindrical_grid(line(0, 0.5, 24), line(0, 2 * np.pi, 12), line(-0.5, 0.5, 48))
+    moved = move_content(integral(source, lambda x, y, z: 3 + x + 0 * y), target).cells / target.cell_volumes()
+    error = moved - integral(target, lambda x, y, z: 3 + x + 0 * y).cells / target.cell_volumes()
+    assert np.abs(error[0]).max() < 1e-3
+
+
+def test_cells_that_narrow_along_two_axes_are_regular():
+    """At an axis, and with a radius that changes by half: the slopes of the Jacobian alone do not tell its shape."""
+    small = spherical_grid([0.02, 0.044, 0.06], line(0, np.pi, 10), line(0, 2 * np.pi, 22))
+    target = placed(small, (0.3, 0.1, 0.2), turn_about((1, 0, 0), 0.7))
+    view = View(target, ball(8))
+    (block,) = view.blocks
+    assert not overlaps(view, block, target.cell_volumes())[2].any()
+
+
+def test_coverage_of_small_cells_that_a_wall_cuts():
+    """Half of a turned box lies in the source; its cells at the wall are sampled."""
+    source = cube(4, 1.0)
+    target = placed(cube(12, 0.3), (1.0, 0.1, 0.2), turn_about((1, 2, 3), 0.7))
+    place = (np.arange(8) + 0.5) / 8
+    q = [(nodes[:-1, None] + np.diff(nodes)[:, None] * place).reshape(-1) for nodes in target.nodes]
+    x = target.map.to_cartesian(q[0][:, None, None], q[1][None, :, None], q[2][None, None, :])[0]
+    exact = (x < 1).reshape(12, 8, 12, 8, 12, 8).mean(axis=(1, 3, 5))
+    coverage = FluidPlan(source, target).coverage
+    assert not (coverage[exact < 0.99] == 1).any()
+    assert np.abs(coverage - exact).max() < 0.02
+
+
+@pytest.mark.parametrize("radius", [0.49, 0.5, 0.503])
+def test_wide_and_thin_cells_of_a_ring_hold_a_constant(radius):
+    """Twelve cells round an axis, thinner than their arcs bulge, over a fine box."""
+    source = cube(24, 0.6)
+    target = cylindrical_grid(line(0, radius, 48), line(0, 2 * np.pi, 12), line(-0.5, 0.5, 12))
+    one = move_content(CellContent(source, source.cell_volumes()), target).cells / target.cell_volumes()
+    np.testing.assert_allclose(one, 1, rtol=1e-12)
 
 
 def test_a_grid_onto_itself_or_a_refinement_is_exact():

@@ -38,8 +38,9 @@ PARTS = {
     "shell round the axis of a box": lambda: (cube(30, 2.0), ball(8, 0.2, 0.5)),
     "slice of a cylinder": lambda: (can(), cube(7, 0.2, (-1.0, 0.8, 0.3))),
     "piece of a wedge": lambda: (wedge(24), cube(8, 0.2, (2.0, 0.2, 0.1))),
-    "three cells": lambda: (ball(24), cube(3, 0.3, (0.5, 0.4, 0.1))),
+    "three cells": lambda: (ball(24), cube(3, 0.3, (0.4, 0.6, 0.1))),
     "one cell": lambda: (cube(30, 1.0), placed(cube(1, 0.2), origin=(0.3, 0.1, 0.2), turn=turn_about((0, 0, 1), 0.6))),
+    "beside the seam": lambda: (ball(24), cube(9, 0.05, (0.5, 0.06, 0.1))),
     "turned and shifted sphere": lambda: (
         placed(ball(24), origin=(0.3, 0.2, 0.1), turn=turn_about((1, 0, 0), 0.7)),
         cube(9, 0.12, (0.8, 0.5, 0.4)),
@@ -126,3 +127,22 @@ def test_what_lies_between_the_places_looked_at_counts():
     across = np.array([-6.1875, 5.8125])
     part = reached(source, cartesian_grid([-6.0, -2.0], across, across))
     assert source.nodes[0][part[0].start + 1] <= 2.0
+
+
+def test_what_lies_between_places_outside_counts():
+    """The sphere bulges into a target of one cell between the places looked at, which are all beyond its wall."""
+    source = spherical_grid(line(1, 2, 400), line(1.0, 2.1, 6), line(-1.1, 1.1, 12))
+    across = np.array([-6.1875, 5.8125])
+    part = reached(source, cartesian_grid([1.99, 8.0], across, across))
+    assert source.nodes[0][part[0].start + 2] <= 1.99
+
+
+def test_slopes_beside_a_seam_look_across_it():
+    """In the first cell of the ring a slope needs the last one."""
+    source = spherical_grid(line(0.2, 1, 12), line(0, np.pi, 12), line(0, 2 * np.pi, 24))
+    target = spherical_grid(line(0.5, 0.6, 6), line(1.2, 1.6, 6), line(0.01, 0.24, 6))
+    part = reached(source, target)
+    assert part[2] == slice(0, 24)
+    content = CellContent(source, source.cell_volumes() * (2 + np.sin(3 * source.centres()[1])))
+    moved = FluidPlan(source, target).move(content).cells / target.cell_volumes()
+    np.testing.assert_allclose(moved, 2 + np.sin(3 * target.centres()[1]), rtol=0.02)

@@ -7,6 +7,15 @@ import numpy as np
 from fieldmover import compute
 from fieldmover.interpolation.view import ON_POLE
 
+_UNEVEN = 1.25  # largest ratio of Jacobians within the middle half of a cell that counts as a parallelepiped
+_BULGE = 0.05  # largest difference between the volume of a cell and that of its eight corners
+_CORNERS = (  # of a tetrahedron
+    (-0.25, -0.25, -0.25),
+    (-0.25, 0.25, 0.25),
+    (0.25, -0.25, 0.25),
+    (0.25, 0.25, -0.25),
+)
+
 
 @compute.inlined
 def corners_of(x, i, j, k, c):
@@ -102,3 +111,54 @@ def jacobian(p):
         _triple(p, 4, 2, 3) + _triple(p, 1, 2, 6),
         _triple(p, 5, 2, 3) + _triple(p, 1, 6, 3),
     )
+
+
+@compute.kernel
+def _jacobian_at(p, a, b, e):
+    """Jacobian of a trilinear function at a place, exactly."""
+    t = np.empty((3, 3))
+    for d in range(3):
+        t[0, d] = p[1, d] + b * p[4, d] + e * (p[5, d] + b * p[7, d])
+        t[1, d] = p[2, d] + a * p[4, d] + e * (p[6, d] + a * p[7, d])
+        t[2, d] = p[3, d] + a * p[5, d] + b * (p[6, d] + a * p[7, d])
+    return _triple(t, 0, 1, 2)
+
+
+@compute.kernel
+def is_regular(seen, own, volume):
+    """Whether a cell is near enough to a parallelepiped, or at least changes its shape as its volume does.
+
+    At a pole of its own grid a cell is a wedge, and seen in another grid without one, so is its image. The arguments
+    are the Jacobians of the image and of the cell itself.
+    """
+    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
+    for n in range(4):
+        a, b, e = _CORNERS[n]
+        there = seen[0] + a * seen[1] + b * seen[2] + e * seen[3]
+        here = own[0] + a * own[1] + b * own[2] + e * own[3]
+        if not (here > 0 and there > 0):
+            return False
+        ratio = there / here
+        least, most = min(least, there), max(most, there)
+        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
+    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
+    return even and abs(own[0] - volume) <= _BULGE * volume
+
+
+@compute.kernel
+def is_regular_after_all(p, y, own, volume, upright):
+    """As `is_regular`, from p and y themselves: where a cell narrows along two axes a Jacobian has more than slopes."""
+    least, most, least_ratio, most_ratio, mean = np.inf, 0.0, np.inf, 0.0, 0.0
+    if not own[0] > 0.25 * (abs(own[1]) + abs(own[2]) + abs(own[3])):
+        return False
+    for n in range(4):
+        a, b, e = _CORNERS[n]
+        there = _jacobian_at(p, a, b, e)
+        here = volume if upright else _jacobian_at(y, a, b, e)
+        if not (here > 0 and there > 0):
+            return False
+        ratio = there / here
+        least, most, mean = min(least, there), max(most, there), mean + 0.25 * here
+        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
+    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
+    return even and abs(mean - volume) <= _BULGE * volume

@@ -26,6 +26,7 @@ _ROUND_OFF = 1e-6  # part of a cell
 _CUT = 0.01  # a cell with no more than this from cut source cells takes or leaves none of it
 _EASE = 8.0  # how much more readily volume comes from outside than from neighbours
 _ROOTS = 0.01  # least part of a cell that is room for it to be the root of a tree
+_FIRST = 1e-3  # least room at the root, over the largest cell of a run, for it to be chosen before others
 # How far to solve. Without room all that is left comes from one place.
 _OPEN, _CLOSED = 2e-3, 1e-4
 _LEAST = float(np.finfo(np.float64).tiny)
@@ -140,17 +141,20 @@ def exchange(periodic: tuple[bool, bool, bool], held: Array, missing: Array, roo
     parts = in_slabs(lambda a, b: _runs(a, b, held, missing, room), shape)
     runs, sums = (np.concatenate(part) for part in zip(*parts, strict=True))
     starts = np.searchsorted(runs[:, 0], np.arange(shape[0] * shape[1] + 1)).astype(np.int32)
-    order, parent, side, label = _tree(seams, *shape, starts, runs)
+    order, parent, side, label = _tree(seams, *shape, starts, runs, sums[:, 3] > _FIRST, np.argsort(-sums[:, 1]))
     closed = label.any()
-    if closed:  # without any room: only what they miss as a whole is left
+    if closed:  # without room worth the name: only what they miss as a whole is left
         lack, volume = (np.bincount(label, sums[:, n]) for n in range(2))
         lack[0], volume[0] = 0.0, 1.0
-        inside, missing = held > 0, missing.copy()
-        missing[inside] -= held[inside] * np.repeat((lack / volume)[label], runs[:, 2] - runs[:, 1])
-    scale = 1.0 / sums[:, 2].max(initial=_LEAST)
-    p = solve(*equations(seams, scale, held, missing, room, _EASE), _CLOSED if closed else _OPEN)
+        inside, cells, missing, room = held > 0, runs[:, 2] - runs[:, 1], missing.copy(), room.copy()
+        missing[inside] -= held[inside] * np.repeat((lack / volume)[label], cells)
+        room[inside] *= np.repeat(label == 0, cells)
+    unit = sums[:, 2].max(initial=_LEAST)
+    links, ours, r = equations(seams, 1.0 / unit, held, missing, room, _EASE)
+    p = solve(links, ours, r, _CLOSED if closed else _OPEN)
+    del ours, r
     flow, extra, need = np.empty((3, *shape)), np.empty(shape), np.empty(len(runs))
-    in_slabs(lambda a, b: _flows(a, b, seams, held, missing, room, free, starts, runs, p, flow, extra, need), shape)
+    in_slabs(lambda a, b: _flows(a, b, unit, links, missing, room, free, starts, runs, p, flow, extra, need), shape)
     _along_tree(order, parent, side, runs, room, free, need, flow, extra)
     loss = np.zeros(shape)
     if any(in_slabs(lambda a, b: _losses(a, b, held, extra, room, flow, loss), shape)):
@@ -180,12 +184,12 @@ def _wants(first, last, volume, held, cut, covered, missing, room):
 def _runs(first, last, held, missing, room):
     """Unbroken rows of cells along axis 3 that hold something.
 
-    Of each: line (number along axes 1 and 2), first cell, end, the cell with most room or -1; and what it misses and
-    holds, and the largest of either in a cell.
+    Of each: line (number along axes 1 and 2), first cell, end, the cell with most room or else -1 - the one that holds
+    most; and what it misses and holds, the largest of either in a cell, and the most room over what the biggest holds.
     """
     _, n2, n3 = held.shape
     most = (last - first) * n2 * ((n3 + 1) // 2)
-    runs, sums = np.empty((most, 4), np.int32), np.empty((most, 3))
+    runs, sums = np.empty((most, 4), np.int32), np.empty((most, 4))
     number = 0
     for i in range(first, last):
         for j in range(n2):
@@ -194,38 +198,42 @@ def _runs(first, last, held, missing, room):
                 if not held[i, j, k] > 0:
                     k += 1
                     continue
-                start, root, widest = k, -1, 0.0
-                lack, volume, largest = 0.0, 0.0, 0.0
+                start, biggest, root, widest, lack, volume, largest = k, k, k, 0.0, 0.0, 0.0, 0.0
                 while k < n3 and held[i, j, k] > 0:
                     lack += missing[i, j, k]
                     volume += held[i, j, k]
                     largest = max(largest, held[i, j, k], abs(missing[i, j, k]))
+                    if held[i, j, k] > held[i, j, biggest]:
+                        biggest = k
                     if room[i, j, k] > widest and room[i, j, k] > _ROOTS * held[i, j, k]:
                         root, widest = k, room[i, j, k]
                     k += 1
-                runs[number, 0], runs[number, 1], runs[number, 2], runs[number, 3] = i * n2 + j, start, k, root
+                runs[number, 0], runs[number, 1], runs[number, 2] = i * n2 + j, start, k
+                runs[number, 3] = root if widest > 0 else -1 - biggest
                 sums[number, 0], sums[number, 1], sums[number, 2] = lack, volume, largest
+                sums[number, 3] = widest / held[i, j, biggest]
                 number += 1
     return runs[:number].copy(), sums[:number].copy()
 
 
 @compute.kernel
-def _tree(seams, n1, n2, n3, starts, runs):
+def _tree(seams, n1, n2, n3, starts, runs, before, biggest):
     """Runs in the order in which they are reached from those with a root, neighbour by neighbour.
 
-    Of each: the run it is reached from, -1 for none, and on which side of that it lies, d + 1 above and -d - 1 below
-    along axis d. The cell where it is reached becomes its root. Runs that none with a root reaches get the number of
-    their component as label, from 1.
+    Those marked `before` come first, lest what is left in large cells ends in small ones. Of each: the run it is
+    reached from, -1 for none, and on which side of that it lies, d + 1 above and -d - 1 below along axis d. The cell
+    where it is reached becomes its root. Runs that none with a root reaches get the number of their component as
+    label, from 1; it starts from its biggest, which feels least of the round-off that ends there.
     """
     number = runs.shape[0]
     order, parent, side = np.empty(number, np.int32), np.full(number, -2, np.int32), np.zeros(number, np.int8)
     label = np.zeros(number, np.int32)
-    head, tail, component, next_start = 0, 0, 0, 0
-    for t in range(number):
-        if runs[t, 3] >= 0:
-            order[tail], parent[t] = t, -1
-            tail += 1
+    head, tail, component, place, turn = 0, 0, 0, 0, 0
     while True:
+        for t in range(number if turn < 2 else 0):
+            if parent[t] == -2 and runs[t, 3] >= 0 and (before[t] or turn == 1):
+                order[tail], parent[t] = t, -1
+                tail += 1
         while head < tail:
             t = order[head]
             head += 1
@@ -233,59 +241,53 @@ def _tree(seams, n1, n2, n3, starts, runs):
             for way in range(6):
                 d, step = way // 2, 1 - 2 * (way % 2)
                 i, j = line // n2 + (step if d == 0 else 0), line % n2 + (step if d == 1 else 0)
-                if not (seams[0] or 0 <= i < n1) or not (seams[1] or 0 <= j < n2):
+                wall3 = d == 2 and not (seams[2] and (end == n3 if step > 0 else start == 0))
+                if wall3 or not (seams[0] or 0 <= i < n1) or not (seams[1] or 0 <= j < n2):
                     continue
-                if d == 2 and not (seams[2] and (end == n3 if step > 0 else start == 0)):
-                    continue
+                low, high = (start, end) if d < 2 else (0, 1) if step > 0 else (n3 - 1, n3)  # cells beside this run
                 other = i % n1 * n2 + j % n2
-                for u in range(starts[other], starts[other + 1]):
-                    if parent[u] > -2:
-                        continue
-                    low, high = max(start, runs[u, 1]), min(end, runs[u, 2]) - 1
-                    if d == 2:
-                        low = high = 0 if step > 0 else n3 - 1
-                        if runs[u, 1] > low or runs[u, 2] <= low:
-                            continue
-                    if low <= high:
-                        runs[u, 3] = min(max(root, low), high)
+                u, last = starts[other], starts[other + 1]
+                u += np.searchsorted(runs[u:last, 2], low, side="right")
+                while u < last and runs[u, 1] < high:
+                    if parent[u] == -2:
+                        runs[u, 3] = min(max(root, low, runs[u, 1]), high - 1, runs[u, 2] - 1)
                         order[tail], parent[u], side[u], label[u] = u, t, step * (d + 1), component
                         tail += 1
-        while next_start < number and parent[next_start] > -2:
-            next_start += 1
-        if next_start == number:
+                    u += 1
+        turn += 1
+        while turn > 1 and place < number and parent[biggest[place]] > -2:
+            place += 1
+        if place == number:
             return order, parent, side, label
-        component += 1
-        order[tail], parent[next_start], label[next_start] = next_start, -1, component
-        runs[next_start, 3] = (runs[next_start, 1] + runs[next_start, 2]) // 2
-        tail += 1
+        if turn > 1:
+            component, t = component + 1, biggest[place]
+            order[tail], parent[t], label[t], runs[t, 3] = t, -1, component, -1 - runs[t, 3]
+            tail += 1
 
 
 @compute.kernel
-def _flows(first, last, seams, held, missing, room, free, starts, runs, p, flow, extra, need):
-    """Flows that belong to p and what comes from outside; what cells of a run still miss then comes from its root."""
+def _flows(first, last, unit, links, missing, room, free, starts, runs, p, flow, extra, need):
+    """Flows that belong to p, and what comes from outside; what cells of a run then miss comes from its root."""
     n1, n2, n3 = p.shape
     left = np.empty(n3)
     for i in range(first, last):
-        up1, open1 = i + 1 if i + 1 < n1 else 0, 1.0 if i + 1 < n1 or seams[0] else 0.0
-        open_down1 = 1.0 if i > 0 or seams[0] else 0.0
+        up1 = i + 1 if i + 1 < n1 else 0
         for j in range(n2):
-            up2, open2 = j + 1 if j + 1 < n2 else 0, 1.0 if j + 1 < n2 or seams[1] else 0.0
-            open_down2 = 1.0 if j > 0 or seams[1] else 0.0
+            up2 = j + 1 if j + 1 < n2 else 0
             for k in range(n3):
-                own, here = held[i, j, k], p[i, j, k]
-                flow1 = open1 * min(own, held[up1, j, k]) * (p[up1, j, k] - here)
-                flow2 = open2 * min(own, held[i, up2, k]) * (p[i, up2, k] - here)
-                below1 = open_down1 * min(held[i - 1, j, k], own) * (here - p[i - 1, j, k])
-                below2 = open_down2 * min(held[i, j - 1, k], own) * (here - p[i, j - 1, k])
+                here = p[i, j, k]
+                flow1 = unit * links[0, i, j, k] * (p[up1, j, k] - here)
+                flow2 = unit * links[1, i, j, k] * (p[i, up2, k] - here)
+                below1 = unit * links[0, i - 1, j, k] * (here - p[i - 1, j, k])
+                below2 = unit * links[1, i, j - 1, k] * (here - p[i, j - 1, k])
                 share = _EASE * room[i, j, k] * here
                 left[k] = missing[i, j, k] - share + ((flow1 - below1) + (flow2 - below2))
                 flow[0, i, j, k], flow[1, i, j, k] = flow1, flow2
                 extra[i, j, k] = 0.0 if free[i, j, k] else share
-            for k in range(n3 - 1):
-                flow[2, i, j, k] = min(held[i, j, k], held[i, j, k + 1]) * (p[i, j, k + 1] - p[i, j, k])
-            k = n3 - 1
-            flow[2, i, j, k] = min(held[i, j, k], held[i, j, 0]) * (p[i, j, 0] - p[i, j, k]) if seams[2] else 0.0
-            left[0] += flow[2, i, j, 0] - flow[2, i, j, k]
+            for k in range(n3):
+                up3 = k + 1 if k + 1 < n3 else 0
+                flow[2, i, j, k] = unit * links[2, i, j, k] * (p[i, j, up3] - p[i, j, k])
+            left[0] += flow[2, i, j, 0] - flow[2, i, j, n3 - 1]
             for k in range(1, n3):
                 left[k] += flow[2, i, j, k] - flow[2, i, j, k - 1]
             for n in range(starts[i * n2 + j], starts[i * n2 + j + 1]):

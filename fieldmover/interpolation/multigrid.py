@@ -27,7 +27,7 @@ _OVER = 1.2  # relaxation
 _ONE, _MORE = np.float32(1), np.float32(1.1)  # how much of a correction is added; most on the finest grid
 _TWICE = 1 << 14  # cells of a coarser grid from which on a second cycle there pays
 _COARSEST = 30  # sweeps over the smallest grid
-_TINY = 1e-20  # of the largest volume: nothing
+_TINY = 1e-30  # of the largest volume: nothing, so that what is divided by it stays in range
 _CHUNK = 1 << 18  # cells per task
 
 
@@ -57,8 +57,11 @@ def solve(links: Single, room: Single, r: Single, enough: float = 1e-4) -> Singl
     array([1.8, 2.2], dtype=float32)
     """
     p, levels = np.zeros(r.shape, np.float32), _levels(links, room)
+    total, closed = levels[0][1], not room.any()
     first = _cycle(levels, p, r, True, _MORE)
     for _ in range(_CYCLES - 1):
+        if closed:  # a constant in p, which nothing fixes, would grow: round-off is a part of p
+            np.subtract(p, p.flat[total.argmax()], out=p, where=total > 0)
         if _cycle(levels, p, r, False, _MORE) <= enough * first:
             break
     return p
@@ -76,7 +79,7 @@ def equations(
     scale : float
         Multiplies all, so that single precision can hold it.
     held, missing, room : ndarrays, shape (n1, n2, n3)
-        Cells that hold next to nothing of 1 / scale take no part.
+        Cells that hold less than 1e-30 / scale take no part.
     ease : float
         Multiplies `room`.
 
@@ -235,9 +238,14 @@ def _plane(i, colour, links, total, r, p, row, turn):
     for j in range(n2):
         _around(i, j, links, r, p, row)
         first = (i + j + colour) % 2
+        before, end = p[i, j, 0], p[i, j, n3 - 1]
         for k in range(n3):
             step = row[k] / total[i, j, k] - p[i, j, k] if total[i, j, k] > 0 else np.float32(0)
             p[i, j, k] += turn[k + first] * step
+        seam = links[2, i, j, n3 - 1]
+        if n3 % 2 and seam > 0:  # the last cell has the colour of the first, and is to see what that has become
+            step = (row[n3 - 1] + seam * (p[i, j, 0] - before)) / total[i, j, n3 - 1] - end
+            p[i, j, n3 - 1] = end + turn[n3 - 1 + first] * step
 
 
 @compute.kernel

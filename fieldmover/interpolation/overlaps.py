@@ -21,7 +21,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover import compute
-from fieldmover.interpolation.corners import corner_coordinates, corners_of, expand, jacobian, value
+from fieldmover.interpolation.corners import (
+    corner_coordinates,
+    corners_of,
+    expand,
+    is_regular,
+    is_regular_after_all,
+    jacobian,
+    value,
+)
 from fieldmover.interpolation.view import ON_POLE, Block, View
 
 Array = NDArray[np.float64]
@@ -41,8 +49,6 @@ _LEAST = 1e-7  # parts of a cell up to this are left out
 _TABLE = 1 << 15  # source cells that one target cell may span before the source is cut instead
 _SMALL = 0.5  # a cell up to this size along an axis of its own grid, in cells of the other, is no further divided
 _WIDTH = 1.0  # widest sub-box along an axis of its own grid, in cells of the other
-_UNEVEN = 1.25  # largest ratio of Jacobians within the middle half of a cell that counts as a parallelepiped
-_BULGE = 0.05  # largest difference between the volume of a cell and that of its eight corners
 
 
 @dataclass(frozen=True, eq=False)
@@ -161,27 +167,6 @@ def _plain(view: View, corners: Array) -> bool:
 
 
 @compute.kernel
-def _regular(seen, own, volume):
-    """Whether a cell is near enough to a parallelepiped, or at least changes its shape as its volume does.
-
-    At a pole of its own grid a cell is a wedge, and seen in another grid without one, so is its image. The arguments
-    are the Jacobians of the image and of the cell itself.
-    """
-    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
-    for n in range(4):  # the corners of a tetrahedron
-        a, b, e = -0.25 if n < 2 else 0.25, -0.25 if n % 2 == 0 else 0.25, -0.25 if n in (0, 3) else 0.25
-        there = seen[0] + a * seen[1] + b * seen[2] + e * seen[3]
-        here = own[0] + a * own[1] + b * own[2] + e * own[3]
-        if not (here > 0 and there > 0):
-            return False
-        ratio = there / here
-        least, most = min(least, there), max(most, there)
-        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
-    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
-    return even and abs(own[0] - volume) <= _BULGE * volume
-
-
-@compute.kernel
 def _overlaps(
     x,
     xi,
@@ -257,7 +242,10 @@ def _overlaps(
                     corners_of(x, i, j, k, c)
                     expand(c, y)
                     here = jacobian(y)
-                if not _regular(jacobian(p), here, volume[i, j, k]):
+                regular = is_regular(jacobian(p), here, volume[i, j, k])
+                if not (regular or aligned):
+                    regular = is_regular_after_all(p, y, here, volume[i, j, k], upright)
+                if not regular:
                     irregular[i, j, k] = not aligned
                     if not aligned:
                         continue
@@ -267,37 +255,34 @@ def _overlaps(
                 small = not own
                 for d in range(3):
                     widest = max(abs(p[d + 1, 0]), abs(p[d + 1, 1]), abs(p[d + 1, 2]))
-                    small = small and widest <= _SMALL
+                    # not where a wall cuts it: the box has no corners that stick out
+                    small = small and widest <= _SMALL and (turns[d] > 0 or (low[d] >= 0 and high[d] <= shape[d]))
                     split[d] = max(2, int(np.ceil(widest / _WIDTH - 1e-6)))
                 if small:
                     if count + 8 > cell.size:
                         count += 8
                         start[row] = count
                         continue
+                    m1, m2, m3 = here[1] / (12 * here[0]), here[2] / (12 * here[0]), here[3] / (12 * here[0])
                     for d in range(3):
+                        # the middle of the volume, not of the corners: at a pole of its own grid a cell is a wedge
+                        middle = p[0, d] + m1 * p[1, d] + m2 * p[2, d] + m3 * p[3, d]
                         half = 0.5 * np.sqrt(p[1, d] ** 2 + p[2, d] ** 2 + p[3, d] ** 2)
-                        left, right = max(p[0, d] - half, low[d]), min(p[0, d] + half, high[d])
+                        half = min(half, middle - low[d], high[d] - middle)
                         begin, length[d, 0], length[d, 1], centre[d, 0], centre[d, 1] = _halves(
-                            max(left, 0.0) if ends[d, 0] else left,
-                            min(right, np.float64(shape[d])) if ends[d, 1] else right,
+                            max(middle - half, low[d]), min(middle + half, high[d])
                         )
                         for m in range(2):
-                            place[d, m] = begin + m
-                            if turns[d] > 0:
-                                place[d, m] = _wrapped(begin + m, shape[d])
-                            elif not 0 <= begin + m < shape[d]:
-                                length[d, m] = 0.0
+                            place[d, m] = begin + m if turns[d] == 0 else _wrapped(begin + m, shape[d])
                             steps[d, m] = np.int16(np.rint(OFFSET_SCALE * centre[d, m]))
-                    kept = 0.0
                     for n in range(8):  # without branches: which cells are reached is not to be foreseen
                         f, g, h = n >> 2, n >> 1 & 1, n & 1
                         amount = length[0, f] * length[1, g] * length[2, h]
                         cell[count] = (place[0, f] * shape[1] + place[1, g]) * shape[2] + place[2, h]
                         part[count] = amount
                         offset[count, 0], offset[count, 1], offset[count, 2] = steps[0, f], steps[1, g], steps[2, h]
-                        kept += amount
                         count += amount > _LEAST
-                    reach[i, j, k] = 1.0 if kept > 1 - TINY else kept
+                    reach[i, j, k] = 1.0
                     start[row] = count
                     continue
                 for d in range(3):

@@ -49,7 +49,7 @@ def reached(source: Grid, target: Grid) -> Part | None:
     if source.kind not in _CLOSED_FORM or seam:
         return None
     locator, ring = Locator(source), azimuth_of(source)
-    low, high, step = np.full(3, np.inf), np.full(3, -np.inf), np.zeros(3)
+    low, high = np.full(3, np.inf), np.full(3, -np.inf)
     angles = [np.inf, -np.inf]
     for q in _surface(target):
         x = np.stack(target.map.to_cartesian(*np.meshgrid(*q, indexing="ij")))
@@ -57,20 +57,22 @@ def reached(source: Grid, target: Grid) -> Part | None:
         if ring is not None:
             angles = [min(angles[0], place[ring].min()), max(angles[1], place[ring].max())]
         for axis, nodes in enumerate(source.nodes):
-            place[axis] = np.interp(place[axis], nodes, np.arange(nodes.size))
-        low, high = np.minimum(low, place.min(axis=(1, 2, 3))), np.maximum(high, place.max(axis=(1, 2, 3)))
-        for along in range(3):
-            change = np.abs(np.diff(place, axis=along + 1))
-            step = np.maximum(step, change.max(axis=(1, 2, 3), initial=0.0))
+            place[axis] = _index(place[axis], nodes)
+        step = _steps(place)
+        low = np.minimum(low, (place - step).min(axis=(1, 2, 3)))
+        high = np.maximum(high, (place + step).max(axis=(1, 2, 3)))
     if ring is not None and angles[1] - angles[0] > _ROUND * 2 * np.pi:
         return None
-    first = np.maximum(np.floor(low - step) - _MARGIN, 0).astype(int)
-    last = np.minimum(np.ceil(high + step) + _MARGIN, source.shape).astype(int)
+    size = np.array(source.shape)
+    first = (np.floor(np.clip(low, 0, size)) - _MARGIN).astype(int)
+    last = (np.ceil(np.clip(high, 0, size)) + _MARGIN).astype(int)
+    whole = source.periodic & ((first < 0) | (last > size))  # the margin is at the other end
+    first, last = np.maximum(first, 0), np.minimum(last, size)
     for axis in range(3):
         at_pole = {0: first[axis] == 0, source.shape[axis]: last[axis] == source.shape[axis]}
         if any(at_pole[end] for end in source.pole_ends(axis)):
-            around = source.ring_of(axis)
-            first[around], last[around] = 0, source.shape[around]
+            whole[source.ring_of(axis)] = True
+    first, last = np.where(whole, 0, first), np.where(whole, size, last)
     if np.prod(last - first) > _WORTH * np.prod(source.shape):
         return None
     one, two, three = (slice(int(a), int(b)) for a, b in zip(first, last, strict=True))
@@ -122,6 +124,25 @@ def _poles(grid: Grid, axis: int, cells: slice) -> Poles:
     ends = grid.pole_ends(axis)
     low, high = 0 in ends and cells.start == 0, grid.shape[axis] in ends and cells.stop == grid.shape[axis]
     return "both" if low and high else "low" if low else "high" if high else None
+
+
+def _index(q: Array, nodes: Array) -> Array:
+    """Index coordinates, beyond the ends in straight lines: what lies between two places outside may be inside."""
+    place = np.interp(q, nodes, np.arange(nodes.size))
+    place += np.minimum(q - nodes[0], 0.0) / (nodes[1] - nodes[0])
+    place += np.maximum(q - nodes[-1], 0.0) / (nodes[-1] - nodes[-2])
+    return place
+
+
+def _steps(place: Array) -> Array:
+    """How far values between a place and those next to it may lie from its own."""
+    step = np.zeros_like(place)
+    for axis in (1, 2, 3):
+        here = np.moveaxis(place, axis, -1)
+        change = np.zeros((*here.shape[:-1], here.shape[-1] + 1))
+        change[..., 1:-1] = np.abs(np.diff(here, axis=-1))
+        step += np.moveaxis(np.maximum(change[..., :-1], change[..., 1:]), -1, axis)
+    return step
 
 
 def _surface(grid: Grid) -> list[list[Array]]:

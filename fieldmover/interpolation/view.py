@@ -201,9 +201,10 @@ def _straighten(xi, lost, turns, first, out):
                         normal0, normal1, normal2 = t0, t1, t2
                         det = t0 * t0 + t1 * t1 + t2 * t2
                     along = (normal0 * b0 + normal1 * b1 + normal2 * b2) / det if det > 0 else 0.0
-                    moved[0, k] -= _small((b0 - along * t0) / 12)
-                    moved[1, k] -= _small((b1 - along * t1) / 12)
-                    moved[2, k] -= _small((b2 - along * t2) / 12)
+                    most = _LARGEST_SHIFT * max(1.0, 0.5 * max(abs(t0), abs(t1), abs(t2)))
+                    moved[0, k] -= _small((b0 - along * t0) / 12, most)
+                    moved[1, k] -= _small((b1 - along * t1) / 12, most)
+                    moved[2, k] -= _small((b2 - along * t2) / 12, most)
             for d in range(3):
                 for k in range(out.shape[3]):
                     out[d, i - first[0], j - first[1], k] = moved[d, k + first[2]]
@@ -224,9 +225,9 @@ def _short(step, turn):
 
 
 @compute.kernel
-def _small(shift):
+def _small(shift, most):
     """A shift unless it is no curvature."""
-    return shift if abs(shift) < _LARGEST_SHIFT else 0.0
+    return shift if abs(shift) < most else 0.0
 
 
 @compute.kernel

@@ -40,13 +40,13 @@ def _time(n: int, runs: int) -> None:
 
 
 def _compare(what: str, source: Grid, target: Grid, runs: int) -> None:
-    content = CellContent(source, source.cell_volumes())
+    content, mass = (CellContent(source, k * source.cell_volumes()) for k in (1.0, 2.0))
     plan = FluidPlan(source, target)
     flux = curl(potential_from_function(source, lambda x, y, z: (-y / 2, x / 2, 0 * z)))
     steps = {
         "plan": lambda: FluidPlan(source, target),
         "move": lambda: plan.move(content),
-        "by mass": lambda: plan.move_by_mass(content, content.cells),
+        "one more by mass": lambda: plan.move_by_mass(mass, content.cells),
         "content": lambda: move_content(content, target),
         "flux": lambda: move_flux(flux, target),
     }
@@ -60,7 +60,7 @@ def _compare(what: str, source: Grid, target: Grid, runs: int) -> None:
     seconds = {name: statistics.median(values) for name, values in taken.items()}
     print(f"Seconds, {what} of a sphere {source.shape} to a box {target.shape}:")
     for name, value in seconds.items():
-        print(f"    {name:10s}{value:8.3f}")
+        print(f"    {name:16s}{value:8.3f}")
     print(f"    content / flux: {seconds['content'] / seconds['flux']:.2f}")
 
 
