@@ -229,7 +229,7 @@ def _tree(seams, n1, n2, n3, starts, runs, before, biggest):
     order, parent, side = np.empty(number, np.int32), np.full(number, -2, np.int32), np.zeros(number, np.int8)
     label = np.zeros(number, np.int32)
     head, tail, component, place, turn = 0, 0, 0, 0, 0
-    while True:
+    while True:  # first from marked roots, then from other roots, then from one component after the other
         for t in range(number if turn < 2 else 0):
             if parent[t] == -2 and runs[t, 3] >= 0 and (before[t] or turn == 1):
                 order[tail], parent[t] = t, -1

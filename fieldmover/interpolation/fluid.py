@@ -1,5 +1,6 @@
 """Conservative transfer of cell contents, mass say, between any two grids.
 
+Of the source only the part that the target reaches is worked with (`fieldmover.interpolation.reach`).
 The overlaps of source and target cells (`fieldmover.interpolation.overlaps`) are measured, then balanced: multiplied
 by one factor per source cell and one per target cell so that the overlaps of every cell add up nearly to its volume
 (`fieldmover.interpolation.balance`). What target cells still miss they get from their neighbours
