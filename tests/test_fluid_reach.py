@@ -5,11 +5,12 @@ import pytest
 
 from fieldmover.forms.fields import CellContent
 from fieldmover.grids import cartesian_grid, cylindrical_grid, placed, spherical_grid, warped_grid
+from fieldmover.grids.part import part_of
 from fieldmover.grids.placement import turn_about
 from fieldmover.interpolation import fluid
 from fieldmover.interpolation.fluid import FluidPlan
 from fieldmover.interpolation.locate import Locator
-from fieldmover.interpolation.reach import part_of, reached
+from fieldmover.interpolation.reach import reached
 from tests.test_fluid import ball, cube, line, smooth, wavy, wedge
 
 

@@ -260,8 +260,8 @@ def test_a_transition_to_the_background(run):
     found, report = run(text, uniform(t=3.0))
     line = found["rho"][:, 8, 8]
     assert line[0] == 0.5
-    assert line[8] == pytest.approx(2.0, rel=1e-14)
-    assert (np.diff(line[:9]) >= -1e-14).all()
+    assert abs(line[8] - 2.0) <= np.spacing(2.0)  # a sum over the parts of a cell
+    assert (np.diff(line[:9]) >= -np.spacing(2.0)).all()
     assert ((line > 0.5 + 1e-9) & (line < 2 - 1e-9)).sum() > 2
     assert found["t"].min() == 1.0
     assert abs(found["t"].max() - 3.0) < 1e-12

@@ -9,12 +9,6 @@ from fieldmover.interpolation.view import ON_POLE
 
 _UNEVEN = 1.25  # largest ratio of Jacobians within the middle half of a cell that counts as a parallelepiped
 _BULGE = 0.05  # largest difference between the volume of a cell and that of its eight corners
-_CORNERS = (  # of a tetrahedron
-    (-0.25, -0.25, -0.25),
-    (-0.25, 0.25, 0.25),
-    (0.25, -0.25, 0.25),
-    (0.25, 0.25, -0.25),
-)
 
 
 @compute.inlined
@@ -31,11 +25,8 @@ def corner_coordinates(xi, i, j, k, shape, turns, rings, ends, c):
 
     A corner on a pole has no azimuth of its own and takes that of the corners it shares an edge with.
     """
-    fine = True
-    for n in range(8):
-        for d in range(3):
-            c[n, d] = xi[d, i + (n >> 2), j + ((n >> 1) & 1), k + (n & 1)]
-            fine = fine and not np.isnan(c[n, d])
+    corners_of(xi, i, j, k, c)
+    fine = not np.isnan(c.sum())
     for axis in range(3):
         ring = rings[axis]
         if ring < 0 or not fine:
@@ -124,6 +115,38 @@ def _jacobian_at(p, a, b, e):
     return _triple(t, 0, 1, 2)
 
 
+@compute.inlined
+def _at_corners(jacobian):
+    """A Jacobian as `jacobian` gives it at the four corners of a tetrahedron."""
+    a, b, e = 0.25 * jacobian[1], 0.25 * jacobian[2], 0.25 * jacobian[3]
+    middle = jacobian[0]
+    return middle - a - b - e, middle - a + b + e, middle + a - b + e, middle + a + b - e
+
+
+@compute.kernel
+def _exactly_at_corners(p):
+    return (
+        _jacobian_at(p, -0.25, -0.25, -0.25),
+        _jacobian_at(p, -0.25, 0.25, 0.25),
+        _jacobian_at(p, 0.25, -0.25, 0.25),
+        _jacobian_at(p, 0.25, 0.25, -0.25),
+    )
+
+
+@compute.kernel
+def _even(there, here, mean, volume):
+    """Whether four Jacobians of an image differ little, or as little as those of the cell; see `is_regular`."""
+    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
+    for n in range(4):
+        if not (here[n] > 0 and there[n] > 0):
+            return False
+        ratio = there[n] / here[n]
+        least, most = min(least, there[n]), max(most, there[n])
+        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
+    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
+    return even and abs(mean - volume) <= _BULGE * volume
+
+
 @compute.kernel
 def is_regular(seen, own, volume):
     """Whether a cell is near enough to a parallelepiped, or at least changes its shape as its volume does.
@@ -131,34 +154,13 @@ def is_regular(seen, own, volume):
     At a pole of its own grid a cell is a wedge, and seen in another grid without one, so is its image. The arguments
     are the Jacobians of the image and of the cell itself.
     """
-    least, most, least_ratio, most_ratio = np.inf, 0.0, np.inf, 0.0
-    for n in range(4):
-        a, b, e = _CORNERS[n]
-        there = seen[0] + a * seen[1] + b * seen[2] + e * seen[3]
-        here = own[0] + a * own[1] + b * own[2] + e * own[3]
-        if not (here > 0 and there > 0):
-            return False
-        ratio = there / here
-        least, most = min(least, there), max(most, there)
-        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
-    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
-    return even and abs(own[0] - volume) <= _BULGE * volume
+    return _even(_at_corners(seen), _at_corners(own), own[0], volume)
 
 
 @compute.kernel
 def is_regular_after_all(p, y, own, volume, upright):
     """As `is_regular`, from p and y themselves: where a cell narrows along two axes a Jacobian has more than slopes."""
-    least, most, least_ratio, most_ratio, mean = np.inf, 0.0, np.inf, 0.0, 0.0
     if not own[0] > 0.25 * (abs(own[1]) + abs(own[2]) + abs(own[3])):
         return False
-    for n in range(4):
-        a, b, e = _CORNERS[n]
-        there = _jacobian_at(p, a, b, e)
-        here = volume if upright else _jacobian_at(y, a, b, e)
-        if not (here > 0 and there > 0):
-            return False
-        ratio = there / here
-        least, most, mean = min(least, there), max(most, there), mean + 0.25 * here
-        least_ratio, most_ratio = min(least_ratio, ratio), max(most_ratio, ratio)
-    even = most <= _UNEVEN * least or most_ratio <= _UNEVEN * least_ratio
-    return even and abs(mean - volume) <= _BULGE * volume
+    here = (volume, volume, volume, volume) if upright else _exactly_at_corners(y)
+    return _even(_exactly_at_corners(p), here, 0.25 * (here[0] + here[1] + here[2] + here[3]), volume)

@@ -25,6 +25,7 @@ from fieldmover import compute
 from fieldmover.errors import FieldError
 from fieldmover.forms.fields import CellContent
 from fieldmover.grids.grid import Grid
+from fieldmover.grids.part import Part, part_of
 from fieldmover.interpolation.aligned import joins_cells
 from fieldmover.interpolation.balance import balance_columns, balance_rows, received
 from fieldmover.interpolation.carry import centre, check, deviations, receive
@@ -32,7 +33,7 @@ from fieldmover.interpolation.exchange import even_out
 from fieldmover.interpolation.images import laid_out
 from fieldmover.interpolation.overlaps import Overlaps, collect, overlaps
 from fieldmover.interpolation.parcels import parcels
-from fieldmover.interpolation.reach import Part, cut_off, part_of, reached
+from fieldmover.interpolation.reach import cut_off, reached
 from fieldmover.interpolation.reconstruct import reconstruct
 from fieldmover.interpolation.seen import seen
 from fieldmover.interpolation.view import Block, View, bounds

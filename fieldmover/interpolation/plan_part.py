@@ -7,17 +7,16 @@ from memory): to some 1e-12 within the margin. Smooth fields feel a new end of t
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fieldmover.forms.fields import EdgePotential
-from fieldmover.grids.axes import Poles
 from fieldmover.grids.grid import Grid
+from fieldmover.grids.part import part_of, poles_at
 from fieldmover.interpolation.plan_nodes import NodePlaces
 
-Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
 
 _MARGIN = {1: 3, 3: 20, 5: 34}  # cells
@@ -50,10 +49,8 @@ class SourcePart:
                 first[axis], cells[axis] = low - margin, count + 2 * margin
         if np.prod(cells) > _WORTH * np.prod(source.shape):
             return cls(source, [0, 0, 0], list(source.shape))
-        q1, q2, q3 = (_cut_nodes(source, axis, first[axis], cells[axis]) for axis in range(3))
-        p1, p2, p3 = (_poles(source, axis, first[axis], cells[axis]) for axis in range(3))
-        s1, s2, s3 = (source.periodic[axis] and cells[axis] == source.shape[axis] for axis in range(3))
-        return cls(replace(source, nodes=(q1, q2, q3), periodic=(s1, s2, s3), poles=(p1, p2, p3)), first, cells)
+        one, two, three = (slice(begin, begin + count) for begin, count in zip(first, cells, strict=True))
+        return cls(part_of(source, (one, two, three)), first, cells)
 
     def cut(self, pot: EdgePotential) -> EdgePotential:
         """A potential of the source on this part of it."""
@@ -86,20 +83,7 @@ def _hull(touched: Mask, seam: bool) -> tuple[int, int]:
 def _at_pole(source: Grid, ring: int, first: list[int], cells: list[int]) -> bool:
     """Whether a part reaches a pole where this ring shrinks to a point."""
     return any(
-        source.ring_axis[axis] == ring and _poles(source, axis, first[axis], cells[axis]) is not None
+        source.ring_axis[axis] == ring
+        and poles_at(source, axis, slice(first[axis], first[axis] + cells[axis])) is not None
         for axis in range(3)
     )
-
-
-def _poles(source: Grid, axis: int, first: int, cells: int) -> Poles:
-    ends = source.pole_ends(axis)
-    low, high = 0 in ends and first == 0, source.shape[axis] in ends and first + cells == source.shape[axis]
-    return "both" if low and high else "low" if low else "high" if high else None
-
-
-def _cut_nodes(source: Grid, axis: int, first: int, cells: int) -> Array:
-    nodes, n = source.nodes[axis], source.shape[axis]
-    turns, places = np.divmod(np.arange(first, first + cells + 1), n)
-    if not source.periodic[axis] or cells == n:
-        return nodes[first : first + cells + 1]
-    return np.asarray(nodes[places] + turns * np.ptp(nodes))

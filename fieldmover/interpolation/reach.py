@@ -2,18 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 from numpy.typing import NDArray
 
-from fieldmover.grids.axes import Poles
 from fieldmover.grids.grid import Grid, at
+from fieldmover.grids.part import Part
 from fieldmover.interpolation.aligned import azimuth_of
 from fieldmover.interpolation.locate import Locator
+from fieldmover.interpolation.view import to_index
 
 Array = NDArray[np.float64]
-Part = tuple[slice, slice, slice]
 
 _CLOSED_FORM = ("cartesian", "cylindrical", "spherical")
 _POINTS = 32  # least number of places along each axis of the target's surface
@@ -57,7 +55,8 @@ def reached(source: Grid, target: Grid) -> Part | None:
         if ring is not None:
             angles = [min(angles[0], place[ring].min()), max(angles[1], place[ring].max())]
         for axis, nodes in enumerate(source.nodes):
-            place[axis] = _index(place[axis], nodes)
+            # straight on beyond the ends: what lies between two places outside may be inside
+            to_index(place[axis].reshape(-1), nodes, False)
         step = _steps(place)
         low = np.minimum(low, (place - step).min(axis=(1, 2, 3)))
         high = np.maximum(high, (place + step).max(axis=(1, 2, 3)))
@@ -79,28 +78,6 @@ def reached(source: Grid, target: Grid) -> Part | None:
     return one, two, three
 
 
-def part_of(grid: Grid, part: Part) -> Grid:
-    """Some cells of a grid.
-
-    Examples
-    --------
-    >>> from fieldmover import cartesian_grid
-    >>> part_of(cartesian_grid([0, 1, 3], [0, 1], [0, 1]), (slice(1, 2), slice(0, 1), slice(0, 1))).nodes[0]
-    array([1., 3.])
-    """
-    nodes, seams, poles = list(grid.nodes), list(grid.periodic), list(grid.poles)
-    for axis, cells in enumerate(part):
-        nodes[axis] = grid.nodes[axis][cells.start : cells.stop + 1]
-        seams[axis] &= nodes[axis].size == grid.nodes[axis].size
-        poles[axis] = _poles(grid, axis, cells)
-    return replace(
-        grid,
-        nodes=(nodes[0], nodes[1], nodes[2]),
-        periodic=(seams[0], seams[1], seams[2]),
-        poles=(poles[0], poles[1], poles[2]),
-    )
-
-
 def cut_off(touched: NDArray[np.bool_], part: Part, shape: tuple[int, int, int]) -> bool:
     """Whether there are marks in the outermost cells of a part of a grid of that shape, at ends that are not its own.
 
@@ -117,21 +94,6 @@ def cut_off(touched: NDArray[np.bool_], part: Part, shape: tuple[int, int, int])
         for place, cut in ((0, cells.start > 0), (-1, cells.stop < n))
         if cut
     )
-
-
-def _poles(grid: Grid, axis: int, cells: slice) -> Poles:
-    """The poles that are left at the ends of some cells of an axis."""
-    ends = grid.pole_ends(axis)
-    low, high = 0 in ends and cells.start == 0, grid.shape[axis] in ends and cells.stop == grid.shape[axis]
-    return "both" if low and high else "low" if low else "high" if high else None
-
-
-def _index(q: Array, nodes: Array) -> Array:
-    """Index coordinates, beyond the ends in straight lines: what lies between two places outside may be inside."""
-    place = np.interp(q, nodes, np.arange(nodes.size))
-    place += np.minimum(q - nodes[0], 0.0) / (nodes[1] - nodes[0])
-    place += np.maximum(q - nodes[-1], 0.0) / (nodes[-1] - nodes[-2])
-    return place
 
 
 def _steps(place: Array) -> Array:

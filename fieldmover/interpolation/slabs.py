@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import replace
 
 import numpy as np
 
 from fieldmover.errors import FieldError, GridError
 from fieldmover.forms.fields import FaceFlux, Three
-from fieldmover.grids.axes import Poles
 from fieldmover.grids.grid import Grid
+from fieldmover.grids.part import part_of
 from fieldmover.interpolation.coverage import known_cells, known_faces
 from fieldmover.interpolation.plan import FluxOnItsWay, FluxPlan, Order
 from fieldmover.interpolation.plan_exact import exact_faces, quantum_for, sizes
@@ -108,12 +107,5 @@ def _slabs(target: Grid, rows: int) -> list[slice]:
 
 def _part(target: Grid, cells: slice) -> Grid:
     """The target's part on some cells along axis 1."""
-    n1, pole = target.shape[0], target.poles[0]
-    low, high = pole in ("low", "both") and cells.start == 0, pole in ("high", "both") and cells.stop == n1
-    ends: Poles = "both" if low and high else "low" if low else "high" if high else None
-    return replace(
-        target,
-        nodes=(target.nodes[0][cells.start : cells.stop + 1], *target.nodes[1:]),
-        periodic=(target.periodic[0] and cells == slice(0, n1), *target.periodic[1:]),
-        poles=(ends, *target.poles[1:]),
-    )
+    _, n2, n3 = target.shape
+    return part_of(target, (cells, slice(0, n2), slice(0, n3)))

@@ -92,7 +92,7 @@ class View:
     def _to_index(self, q: Coordinates) -> Coordinates:
         """Replace coordinates of the other grid, one array per axis, by index coordinates."""
         for values, nodes, seam in zip(q, self.onto.nodes, self.onto.periodic, strict=True):
-            _to_index(values, nodes, seam)
+            to_index(values, nodes, seam)
         return q
 
     def _lost(self, xi: Array) -> NDArray[np.int8]:
@@ -136,7 +136,7 @@ def bounds(marked: NDArray[np.bool_], block: Block) -> Block | None:
 
 
 @compute.kernel
-def _to_index(q, nodes, seam):
+def to_index(q, nodes, seam):
     """Replace coordinates along an axis by index coordinates, in a straight line beyond walls, periodic at a seam."""
     first, last, cells = nodes[0], nodes[-1], nodes.size - 1
     cell = 0

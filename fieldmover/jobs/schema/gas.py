@@ -38,6 +38,7 @@ Dimension = Literal[
 
 
 def data_alone(value: Any) -> Any:
+    """A table with the key `data` in place of data written alone."""
     return {"data": value} if isinstance(value, str | list) else value
 
 

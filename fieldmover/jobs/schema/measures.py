@@ -43,6 +43,7 @@ def _figure(name: str) -> str:
 
 
 def among(name: str, names: list[str]) -> None:
+    """Refuse a name that is not one of some, and tell the nearest that is."""
     if name not in names:
         near = get_close_matches(name, names, 1, 0.0)
         raise ValueError(f"there is no such figure; the nearest is {near[0]!r}")

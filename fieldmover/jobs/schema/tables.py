@@ -31,6 +31,7 @@ UNITS = ("gaussian", "heaviside-lorentz")
 
 
 def from_text(value: Any) -> Any:
+    """A number, also of a text like "pi / 2"; anything else as it is."""
     return number(value) if isinstance(value, str) else value
 
 
@@ -40,6 +41,7 @@ def sought(value: Any) -> Any:
 
 
 def unit_of(value: Any) -> Any:
+    """A unit of the magnetic field, by name or as a number above 0."""
     is_number = isinstance(value, int | float) and not isinstance(value, bool)
     if value in UNITS or (is_number and 0 < value < math.inf):
         return value
@@ -47,6 +49,7 @@ def unit_of(value: Any) -> Any:
 
 
 def increasing(values: list[float]) -> list[float]:
+    """Refuse positions that do not increase."""
     for place, (a, b) in enumerate(pairwise(values)):
         if not a < b:
             raise ValueError(f"positions must increase: {a:g}, then {b:g} at [{place + 1}]")
@@ -54,6 +57,7 @@ def increasing(values: list[float]) -> list[float]:
 
 
 def name_of(value: str) -> str:
+    """Refuse what is no name for a quantity."""
     if not re.fullmatch(r"[A-Za-z][\w -]{,99}", value):
         raise ValueError(f"found {value[:40]!r}; expected a name: a letter, then letters, digits, spaces, _ and -")
     return value
@@ -65,6 +69,7 @@ def plain(name: str) -> str:
 
 
 def path_of_data(value: str) -> str:
+    """Refuse what is no path of a dataset."""
     parts = value.removeprefix("/").split("/")
     if any(part in ("", ".") or re.search(r"[\s@]", part) for part in parts):
         raise ValueError(f"found {value!r}; expected the path of a dataset like /state/rho, without spaces and @")
@@ -72,6 +77,7 @@ def path_of_data(value: str) -> str:
 
 
 def sort_of_data(value: Any) -> str:
+    """Which alternative data are: one dataset, or one for each component."""
     return "vector" if isinstance(value, list) else "scalar"
 
 
